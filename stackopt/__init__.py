@@ -1,0 +1,1 @@
+"""stackopt: find the multilayer shield stacks that meet an attenuation mask at least mass, cost and thickness."""

@@ -1,0 +1,1 @@
+"""Fields and media: the physics, readable and independent of files, searches and compiled code."""

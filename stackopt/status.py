@@ -1,0 +1,38 @@
+"""What long work tells about itself while it goes on."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+
+
+@dataclass(frozen=True)
+class Status:
+    """State of a running phase.
+
+    Parameters
+    ----------
+    phase : str
+        What is going on, in words: "compiling", "exploring", "proving", "confirming".
+    fraction : float or None
+        Share done, 0 to 1, or None where it cannot be known.
+    rate : str
+        Speed in words with its unit, such as "41,000 stacks/s".
+    front_size : int
+        Stacks on the front so far.
+    best : mapping
+        Best value so far of each objective, as text with its unit.
+    seconds_left : float or None
+        Estimated time to the end of the phase.
+    """
+
+    phase: str
+    fraction: float | None = None
+    rate: str = ""
+    front_size: int = 0
+    best: Mapping[str, str] = field(default_factory=dict)
+    seconds_left: float | None = None
+
+
+Watcher = Callable[[Status], None]
+"""Receives every status; called from the main thread, several times a second at most."""

@@ -1,0 +1,165 @@
+"""Text to SI and back, and the physical constants.
+
+The readers hand every quantity of a file through `parse_quantity`; everything after that is SI floats. The unit library
+is imported on first use, so that start-up stays quick.
+"""
+
+from __future__ import annotations
+
+import functools
+import math
+import re
+from typing import TYPE_CHECKING
+
+from stackopt.errors import show
+
+if TYPE_CHECKING:
+    import pint
+
+SPEED_OF_LIGHT = 299_792_458.0
+"""m/s, exact (SI)."""
+MU_0 = 4e-7 * math.pi
+"""H/m; the pre-2019 value, within 2e-10 of CODATA 2018."""
+EPSILON_0 = 1.0 / (MU_0 * SPEED_OF_LIGHT**2)
+"""F/m."""
+ETA_0 = MU_0 * SPEED_OF_LIGHT
+"""ohm, impedance of free space."""
+
+UNITS = {
+    "length": ("m", '"35 um"'),
+    "frequency": ("Hz", '"10 kHz"'),
+    "conductivity": ("S/m", '"58 MS/m"'),
+    "density": ("kg/m^3", '"8930 kg/m^3"'),
+    "area density": ("kg/m^2", '"4 kg/m^2"'),
+    "flux density": ("T", '"1.5 T"'),
+    "potential": ("V", '"-0.35 V"'),
+    "angle": ("rad", '"30 deg"'),
+    "current": ("A", '"12 A"'),
+    "power": ("W", '"2 W"'),
+    "inductance": ("H", '"24 uH"'),
+    "level": ("dB", '"14 dB"'),
+    "ratio": ("%", '"5 %"'),
+}
+"""Kind of quantity: its unit inside the program, and an example for messages."""
+
+_UNIT = re.compile(r"(?:[^\W\d_]+|°)(?:(?:\^|\*\*)-?\d|[²³])?(?:\s*[ */·]\s*[^\W\d_]+(?:(?:\^|\*\*)-?\d|[²³])?)*")
+"""What the unit library may be handed: names and small powers, never arithmetic."""
+_MIL = re.compile(r"\bmil\b")
+_NUMBER = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)\s*(.*?)\s*$")
+
+
+@functools.cache
+def _registry() -> pint.UnitRegistry[float]:
+    import pint
+
+    return pint.UnitRegistry(cache_folder=None)
+
+
+def parse_quantity(text: object, kind: str) -> float:
+    """Read a quantity with its unit.
+
+    Parameters
+    ----------
+    text : object
+        What stands in the file, for example ``"35 um"``. Anything but text is refused, because a number has no unit.
+    kind : str
+        A key of `UNITS`.
+
+    Returns
+    -------
+    float
+        The value in the unit that `UNITS` gives for the kind; ``"5 %"`` is 0.05 and ``"14 dB"`` is 14.
+
+    Raises
+    ------
+    ValueError
+        With a message for the user: what was found, and which unit to write.
+
+    Examples
+    --------
+    >>> parse_quantity("10 mil", "length")
+    0.000254
+    >>> parse_quantity("14 dB", "level")
+    14.0
+    """
+    unit, example = UNITS[kind]
+    if not isinstance(text, str):
+        raise ValueError(
+            f"found {show(text)}, which has no unit; write the {kind} as text with its unit, such as {example}"
+        )
+    match = _NUMBER.match(text)
+    if match is None:
+        raise ValueError(f"found {show(text)}; write the {kind} as a number and a unit, such as {example}")
+    number, given = float(match[1]), match[2]
+    if not math.isfinite(number):
+        raise ValueError(f"found {show(text)}, which is too large for a number; write the {kind} such as {example}")
+    if not given:
+        raise ValueError(f"found {show(text)}, which has no unit; write {unit} or a multiple of it, such as {example}")
+    if kind in ("level", "ratio"):
+        if given != unit:
+            raise ValueError(f"found {show(text)}; a {kind} is given in {unit}, such as {example}")
+        return number / 100.0 if kind == "ratio" else number
+    return _to_si(number, given, kind, text)
+
+
+def _to_si(number: float, given: str, kind: str, text: str) -> float:
+    import pint
+
+    unit, example = UNITS[kind]
+    registry = _registry()
+    try:
+        if _UNIT.fullmatch(given) is None:
+            raise pint.UndefinedUnitError(given)
+        name = _MIL.sub("thou", given)  # the library's own mil is an angle
+        value = float(registry.Quantity(number, name).to(unit).magnitude)
+    except pint.DimensionalityError:
+        raise ValueError(
+            f"found {show(text)}, which is not a {kind}; write {unit} or a multiple of it, such as {example}"
+        ) from None
+    except Exception:  # the unit library raises many kinds for text that is no unit
+        raise ValueError(
+            f"found {show(text)}, whose unit {show(given)} is unknown; "
+            f"write {unit} or a multiple of it, such as {example}"
+        ) from None
+    if not math.isfinite(value):
+        raise ValueError(f"found {show(text)}, which is too large; write the {kind} such as {example}")
+    return float(f"{value:.15g}")  # "105 um" and "0.105 mm" are the same number
+
+
+def format_thickness(thickness_m: float) -> str:
+    """Write a thickness the way stacks are written: without a space, in um below 1 mm and in mm from there.
+
+    Examples
+    --------
+    >>> format_thickness(35e-6), format_thickness(1.5e-3)
+    ('35um', '1.5mm')
+    """
+    micrometres = round(thickness_m * 1e6, 6)
+    if micrometres < 1000.0:
+        return f"{micrometres:.10g}um"
+    return f"{micrometres / 1000.0:.10g}mm"
+
+
+def format_frequency(frequency_hz: float) -> str:
+    """Write a frequency in Hz, kHz, MHz or GHz with four digits.
+
+    Examples
+    --------
+    >>> format_frequency(16e6), format_frequency(0.0)
+    ('16 MHz', '0 Hz')
+    """
+    for scale, unit in ((1e9, "GHz"), (1e6, "MHz"), (1e3, "kHz")):
+        if frequency_hz >= scale:
+            return f"{frequency_hz / scale:.4g} {unit}"
+    return f"{frequency_hz:.4g} Hz"
+
+
+def format_attenuation(attenuation_db: float) -> str:
+    """Write an attenuation for people: nobody can measure more than 120 dB, so no more is shown.
+
+    Examples
+    --------
+    >>> format_attenuation(43.21), format_attenuation(250.0)
+    ('43.2 dB', '> 120 dB')
+    """
+    return "> 120 dB" if attenuation_db > 120.0 else f"{attenuation_db:.1f} dB"

@@ -21,6 +21,8 @@ SHEET = 8 * LANES
 """Numbers in a block of a sheet: planes of A, B, C and D."""
 ENDING = 4 * LANES
 """Numbers in a block of the ending: planes of the weight w and the ratio e."""
+CLOSING = 4 * LANES
+"""Numbers in a block of a closing sheet: planes of alpha and beta."""
 TOTAL = 2 * LANES
 """Numbers in an accumulator: planes of one complex number."""
 
@@ -49,6 +51,6 @@ def pack_blocks(*entries: tuple[Complex, float]) -> Real:
 
 
 def unpack_blocks(flat: Real, tables: int, entries: int) -> Complex:
-    """Undo `pack_blocks` for a number of tables one after the other: shape (entry, table, line), unused lanes included."""
+    """Undo `pack_blocks` for tables one after the other: shape (entry, table, line), unused lanes included."""
     planes = flat.reshape(tables, -1, 2 * entries, LANES).transpose(2, 0, 1, 3).reshape(2 * entries, tables, -1)
     return np.asarray(planes[0::2] + 1j * planes[1::2])

@@ -44,6 +44,8 @@ COST_UNIT = 1e6
 THICKNESS_UNIT = 1e12
 """Integer thickness units in a metre (picometres)."""
 
+MARGIN_SLACK_DB = 1e-9
+"""A margin this little below zero still counts as met, so that rounding cannot decide."""
 QUADRATURE_ERROR_DB = 0.02
 _LARGEST_EXPONENT = 320.0  # nepers between the lines of a row; its square stays inside the range of doubles
 

@@ -11,25 +11,8 @@
 
 from __future__ import annotations
 
-import reprlib
 from collections.abc import Iterable
 from dataclasses import dataclass
-
-_SHORT = reprlib.Repr()
-_SHORT.maxstring = _SHORT.maxother = 60
-
-
-def show(value: object) -> str:
-    """Write a value found in a file for a message, as the file would write it and shortened where it is long.
-
-    Examples
-    --------
-    >>> show("35"), show(True), show({"a": 1})
-    ("'35'", 'true', 'a table')
-    """
-    if isinstance(value, bool):
-        return str(value).lower()
-    return "a table" if isinstance(value, dict) else _SHORT.repr(value)
 
 
 @dataclass(frozen=True)

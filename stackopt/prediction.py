@@ -1,4 +1,4 @@
-"""Predictions of chosen stacks: attenuation against every mask, totals, and the rules of the problem that a stack breaks.
+"""Predictions of chosen stacks: attenuation against every mask, totals, and the rules that a stack breaks.
 
 Free of compiled code, so that a single look answers quickly; any thickness is allowed.
 """
@@ -98,12 +98,15 @@ def predict(problem: Problem, stacks: Sequence[Stack], density: int = 1) -> tupl
 
 
 def totals(problem: Problem, stack: Stack) -> tuple[float, float, float]:
-    """Mass (kg/m^2), cost (per m^2) and thickness (m) with bonds and handling; the cost is NaN where a price is missing.
+    """Mass (kg/m^2), cost (per m^2) and thickness (m) with bonds and handling.
 
-    The sums are those of the search, integer units included, so that they agree to the last digit.
+    The cost is NaN where a price is missing. The sums are those of the search, integer units included,
+    so that they agree to the last digit.
     """
     layers = with_bonds(problem, stack)
-    mass, cost, thickness = (sum(column) for column in zip(*(sheet_sums(problem, layer) for layer in layers), strict=True))
+    mass, cost, thickness = (
+        sum(column) for column in zip(*(sheet_sums(problem, layer) for layer in layers), strict=True)
+    )
     cost += len(stack) * round(problem.rules.cost_per_sheet * COST_UNIT)
     priced = all(problem.materials[layer.material].price(layer.thickness_m) is not None for layer in layers)
     return mass / MASS_UNIT, cost / COST_UNIT if priced else math.nan, thickness / THICKNESS_UNIT

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stackopt import evaluate
-from stackopt.compiled import THICKNESS_UNIT, CompiledProblem
+from stackopt.compiled import MARGIN_SLACK_DB, THICKNESS_UNIT, CompiledProblem
 from stackopt.problem import Sheet, Stack
 
 Real = NDArray[np.float64]
@@ -125,6 +125,6 @@ class Stock:
         if np.any(needed):
             subset, subset_codes = self.tabulated(genes[needed])
             margin, _ = evaluate.margins(subset, subset_codes)
-            violation[needed] = -margin
+            violation[needed] = -margin - MARGIN_SLACK_DB
             values[needed] = evaluate.objective_values(subset, subset_codes, totals[needed], margin)
         return Judged(values, violation, needed & (violation <= 0.0), int(np.count_nonzero(needed)))

@@ -9,9 +9,8 @@ from __future__ import annotations
 import functools
 import math
 import re
+import reprlib
 from typing import TYPE_CHECKING
-
-from stackopt.errors import show
 
 if TYPE_CHECKING:
     import pint
@@ -42,10 +41,27 @@ UNITS = {
 }
 """Kind of quantity: its unit inside the program, and an example for messages."""
 
+MAX_TEXT = 100
+"""Characters in a quantity; longer text is refused before anything looks at it."""
 _UNIT = re.compile(r"(?:[^\W\d_]+|°)(?:(?:\^|\*\*)-?\d|[²³])?(?:\s*[ */·]\s*[^\W\d_]+(?:(?:\^|\*\*)-?\d|[²³])?)*")
 """What the unit library may be handed: names and small powers, never arithmetic."""
+_SHORT = reprlib.Repr()
+_SHORT.maxstring = _SHORT.maxother = 60
 _MIL = re.compile(r"\bmil\b")
 _NUMBER = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)\s*(.*?)\s*$")
+
+
+def show(value: object) -> str:
+    """Write a value found in a file for a message, as the file would write it and shortened where it is long.
+
+    Examples
+    --------
+    >>> show("35"), show(True), show({"a": 1})
+    ("'35'", 'true', 'a table')
+    """
+    if isinstance(value, bool):
+        return str(value).lower()
+    return "a table" if isinstance(value, dict) else _SHORT.repr(value)
 
 
 @functools.cache
@@ -87,7 +103,7 @@ def parse_quantity(text: object, kind: str) -> float:
         raise ValueError(
             f"found {show(text)}, which has no unit; write the {kind} as text with its unit, such as {example}"
         )
-    match = _NUMBER.match(text)
+    match = _NUMBER.match(text) if len(text) <= MAX_TEXT else None
     if match is None:
         raise ValueError(f"found {show(text)}; write the {kind} as a number and a unit, such as {example}")
     number, given = float(match[1]), match[2]
@@ -102,16 +118,20 @@ def parse_quantity(text: object, kind: str) -> float:
     return _to_si(number, given, kind, text)
 
 
+@functools.cache
+def _factor(given: str, unit: str) -> float:
+    if _UNIT.fullmatch(given) is None:
+        raise ValueError(given)
+    name = _MIL.sub("thou", given)  # the library's own mil is an angle
+    return float(_registry().Quantity(1.0, name).to(unit).magnitude)
+
+
 def _to_si(number: float, given: str, kind: str, text: str) -> float:
     import pint
 
     unit, example = UNITS[kind]
-    registry = _registry()
     try:
-        if _UNIT.fullmatch(given) is None:
-            raise pint.UndefinedUnitError(given)
-        name = _MIL.sub("thou", given)  # the library's own mil is an angle
-        value = float(registry.Quantity(number, name).to(unit).magnitude)
+        value = number * _factor(given, unit)
     except pint.DimensionalityError:
         raise ValueError(
             f"found {show(text)}, which is not a {kind}; write {unit} or a multiple of it, such as {example}"

@@ -1,0 +1,342 @@
+"""The commands: options to calls, results to the terminal, exceptions to exit codes.
+
+Everything heavy is imported inside the commands, so that help answers at once.
+"""
+
+from __future__ import annotations
+
+import math
+import os
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+import typer.core
+
+from stackopt.errors import Finding, InputError, StackoptError
+
+if TYPE_CHECKING:
+    from stackopt.outputs.console import PlainConsole
+    from stackopt.problem import Problem, Stack
+    from stackopt.run import RunResult
+
+LARGEST_SEED = 2**32 - 1
+PLOT_SUFFIXES = (".png", ".svg", ".pdf")
+
+
+class Commands(typer.core.TyperGroup):
+    """The group of all commands: the one place where exceptions become messages and exit codes."""
+
+    def invoke(self, ctx: Any) -> Any:
+        """Run the command."""
+        try:
+            return super().invoke(ctx)
+        except StackoptError as error:
+            code = error.exit_code
+            typer.echo(str(error), err=True)
+        except KeyboardInterrupt:
+            code = 130
+            typer.echo("Interrupted.", err=True)
+        except BrokenPipeError:
+            # The reader of the output has seen enough (| head).
+            from stackopt.outputs.console import drop_output
+
+            code = 0
+            drop_output()
+        except Exception as error:
+            if isinstance(error, typer.Abort) or hasattr(error, "exit_code"):  # typer's own: wrong usage, exit
+                raise
+            if os.environ.get("STACKOPT_DEBUG") == "1":
+                raise
+            code = 2
+            typer.echo(
+                f"stackopt failed on a mistake of its own, {type(error).__name__}: {error}. Please report it with the "
+                "command and its files; with STACKOPT_DEBUG=1 in the environment it shows where.",
+                err=True,
+            )
+        raise typer.Exit(code)
+
+
+app = typer.Typer(
+    cls=Commands,
+    add_completion=False,
+    no_args_is_help=True,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["-h", "--help"]},
+    help=(
+        "Find the multilayer shield stacks that meet an attenuation mask at least mass, cost and thickness.\n\n"
+        "Exit codes: 0 done; 1 the answer is no; 2 bad input; 130 interrupted, checkpoint written."
+    ),
+)
+
+ProblemFile = Annotated[Path, typer.Argument(metavar="PROBLEM", help="Problem file (TOML).", show_default=False)]
+RunFolder = Annotated[Path, typer.Argument(metavar="RUN", help="Folder of a run.", show_default=False)]
+Outside = Annotated[
+    bool, typer.Option("--allow-outside", help="Also read tables outside the folders of problem and material set.")
+]
+Plot = Annotated[Path | None, typer.Option(metavar="FILE", help="Draw the curves (.png, .svg or .pdf).")]
+Hours = Annotated[float | None, typer.Option(metavar="H", help="Stop after so many hours; the run can go on later.")]
+Workers = Annotated[int | None, typer.Option(metavar="N", help="Worker processes; one for each processor if left out.")]
+
+
+def _show_version(wanted: bool) -> None:
+    if wanted:
+        from importlib.metadata import version
+
+        typer.echo(f"stackopt {version('stackopt')}")
+        raise typer.Exit
+
+
+@app.callback()
+def _options(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_show_version, is_eager=True, help="Show the version and exit.")
+    ] = False,
+) -> None:
+    pass
+
+
+@app.command()
+def check(problem: ProblemFile, allow_outside: Outside = False) -> None:
+    """Read a problem, say what was understood, and whether any stack can meet the mask.
+
+    Every mistake in the files is reported at once. Exit code 1: no stack was found that meets the mask.
+    """
+    from stackopt.compiled import compile_problem
+    from stackopt.outputs.console import make_console
+    from stackopt.outputs.report import scouted_words, show_sections
+    from stackopt.readers import read_problem
+
+    console = make_console()
+    compiled = compile_problem(read_problem(problem, allow_outside))
+    show_sections(console, compiled)
+    console.print()
+    _show_cautions(console, compiled.problem)
+
+    from stackopt.scout import scout
+
+    scouted = scout(compiled)
+    console.print(f"{scouted_words(compiled.problem, scouted, problem)}")
+    if scouted.margin_db < 0.0:
+        raise typer.Exit(1)
+
+
+@app.command()
+def predict(
+    problem: ProblemFile,
+    stacks: Annotated[
+        list[str],
+        typer.Argument(metavar="STACK...", help='Such as "steel 150um / copper 35um", source side first.'),
+    ],
+    csv: Annotated[Path | None, typer.Option(metavar="FILE", help="Write the table at full precision.")] = None,
+    plot: Plot = None,
+    allow_outside: Outside = False,
+) -> None:
+    """Predict the attenuation of stacks against the mask. Any thickness may be written."""
+    from stackopt.outputs.console import make_console
+    from stackopt.outputs.report import show_verdicts
+    from stackopt.outputs.tables import prediction_tables, write_predictions
+    from stackopt.prediction import predict as predict_stacks
+    from stackopt.readers import read_problem
+
+    _refuse(_wrong_plot(plot))
+    console = make_console()
+    known = read_problem(problem, allow_outside)
+    chosen = _parse_stacks(stacks, known)
+    predictions = predict_stacks(known, chosen)
+    _show_cautions(console, known, chosen)
+    for table in prediction_tables(predictions, console.width):
+        console.print(table)
+    show_verdicts(console, known, predictions)
+    if csv is not None:
+        write_predictions(predictions, csv)
+        console.print(f"Table: {csv}")
+    if plot is not None:
+        from stackopt.outputs.plots import write_prediction_plot
+
+        write_prediction_plot(known, chosen, plot)
+        console.print(f"Plot: {plot}")
+
+
+@app.command()
+def search(
+    problem: Annotated[
+        Path | None,
+        typer.Argument(
+            metavar="PROBLEM", help="Problem file (TOML); a resumed run has its own copy.", show_default=False
+        ),
+    ] = None,
+    hours: Hours = None,
+    workers: Workers = None,
+    seed: Annotated[int | None, typer.Option(metavar="N", help="Random seed instead of the problem's own.")] = None,
+    out: Annotated[
+        Path | None, typer.Option(metavar="FOLDER", help="New folder for the run; results/<problem>-<n> if left out.")
+    ] = None,
+    resume: Annotated[Path | None, typer.Option(metavar="RUN", help="Go on with an interrupted run.")] = None,
+    allow_outside: Outside = False,
+) -> None:
+    """Find the front: the stacks that meet the mask and that no other beats in every objective.
+
+    Explores first, then proves that nothing is missing. Exit code 1: no stack meets the mask.
+    """
+    _refuse(_wrong_hours(hours), _wrong_workers(workers), _wrong_seed(seed), *_wrong_start(problem, seed, out, resume))
+    from stackopt.outputs.progress import TerminalProgress
+    from stackopt.run import RunOptions, search_run
+
+    options = RunOptions(hours=hours, workers=workers, seed=seed, out=out, resume=resume, allow_outside=allow_outside)
+    with TerminalProgress() as watcher:
+        result = search_run(problem, options, watcher)
+    _show_result(result)
+
+
+@app.command()
+def prove(run: RunFolder, hours: Hours = None, workers: Workers = None) -> None:
+    """Go on with the proof that the front of a run is complete."""
+    _refuse(_wrong_hours(hours), _wrong_workers(workers), _wrong_run("RUN", run))
+    from stackopt.outputs.progress import TerminalProgress
+    from stackopt.run import RunOptions, prove_run
+
+    with TerminalProgress() as watcher:
+        result = prove_run(run, RunOptions(hours=hours, workers=workers), watcher)
+    _show_result(result)
+
+
+@app.command()
+def materials(
+    material_set: Annotated[Path, typer.Argument(metavar="SET", help="Material set (TOML).", show_default=False)],
+    origins: Annotated[bool, typer.Option("--origins", help="Also list where each number comes from.")] = False,
+    plot: Plot = None,
+    allow_outside: Outside = False,
+) -> None:
+    """List a material set with permeability and skin depth over frequency."""
+    from stackopt.outputs.console import make_console
+    from stackopt.outputs.materials import material_tables
+    from stackopt.readers import read_material_set
+
+    _refuse(_wrong_plot(plot))
+    console = make_console()
+    known = read_material_set(material_set, allow_outside)
+    console.print(known.title, style="bold")
+    for table in material_tables(known, origins):
+        console.print(table)
+    for remarks in known.remarks.values():
+        for remark in remarks:
+            console.print(f"Remark: {remark}")
+    if plot is not None:
+        from stackopt.outputs.material_plots import write_material_plot
+
+        write_material_plot(known, plot)
+        console.print(f"Plot: {plot}")
+
+
+def _parse_stacks(texts: list[str], problem: Problem) -> list[Stack]:
+    """Read every stack and report the mistakes of all of them together."""
+    from stackopt.readers import parse_stack
+
+    stacks: list[Stack] = []
+    findings: list[Finding] = []
+    for text in texts:
+        try:
+            stacks.append(parse_stack(text, problem.materials))
+        except InputError as error:
+            findings.extend(error.findings)
+    if findings:
+        raise InputError(findings)
+    return stacks
+
+
+def _show_result(result: RunResult) -> None:
+    from stackopt.outputs.console import make_console
+    from stackopt.outputs.report import short_path
+    from stackopt.outputs.tables import front_table
+
+    console, front = make_console(), result.front
+    folder = short_path(result.folder)
+    if len(front):
+        _show_cautions(console, front.problem, [row.stack for row in front.rows])
+        console.print(front_table(front, console.width, rest_in=os.path.join(folder, "front.csv")))
+    console.print(front.statement)
+    console.print(f"Files: {folder}")
+    if not len(front):
+        raise typer.Exit(1)
+
+
+def _show_cautions(console: PlainConsole, problem: Problem, stacks: list[Stack] | None = None) -> None:
+    from stackopt.outputs.cautions import cautions
+    from stackopt.outputs.report import section_text
+
+    console.print("Cautions", style="bold")
+    lines = [("-", text) for text in cautions(problem, stacks)]
+    console.print(section_text(lines, console.width) + "\n", soft_wrap=True)
+
+
+def _refuse(*findings: Finding | None) -> None:
+    """Report all wrong options together."""
+    wrong = [finding for finding in findings if finding is not None]
+    if wrong:
+        raise InputError(wrong)
+
+
+def _wrong_hours(hours: float | None) -> Finding | None:
+    if hours is None or 0.0 < hours < math.inf:
+        return None
+    return Finding("", "--hours", f"found {hours:g}; write a time above 0 hours, such as 0.5")
+
+
+def _wrong_workers(workers: int | None) -> Finding | None:
+    if workers is None or workers >= 1:
+        return None
+    return Finding("", "--workers", f"found {workers}; write 1 or more")
+
+
+def _wrong_seed(seed: int | None) -> Finding | None:
+    if seed is None or 0 <= seed <= LARGEST_SEED:
+        return None
+    return Finding("", "--seed", f"found {seed}; write a whole number from 0 to {LARGEST_SEED}")
+
+
+def _wrong_start(problem: Path | None, seed: int | None, out: Path | None, resume: Path | None) -> list[Finding | None]:
+    if resume is None:
+        if problem is None:
+            return [Finding("", "PROBLEM", "is missing; name a problem file, or a run to go on with: --resume RUN")]
+        return [_wrong_out(out)]
+    kept = [
+        Finding("", name, "cannot be given with --resume: a resumed run keeps its own; leave it out")
+        for name, value in (("--seed", seed), ("--out", out))
+        if value is not None
+    ]
+    return [*kept, _wrong_run("--resume", resume)]
+
+
+def _wrong_out(out: Path | None) -> Finding | None:
+    if out is None or not out.exists():
+        return None
+    if not out.is_dir():
+        return Finding("", "--out", f"found {str(out)!r}, which is a file; name a new folder")
+    if any(out.iterdir()):
+        return Finding(
+            "", "--out", f"found {str(out)!r}, which is not empty; name a new folder, or go on with a run: --resume RUN"
+        )
+    return None
+
+
+def _wrong_run(name: str, run: Path) -> Finding | None:
+    if run.is_dir():
+        return None
+    return Finding("", name, f"found {str(run)!r}, which is no folder; name the folder of a run")
+
+
+def _wrong_plot(plot: Path | None) -> Finding | None:
+    if plot is None or plot.suffix.lower() in PLOT_SUFFIXES:
+        return None
+    return Finding("", "--plot", f"found {str(plot)!r}; write a name that ends in {', '.join(PLOT_SUFFIXES)}")
+
+
+def main() -> None:
+    """Entry point of the command ``stackopt``."""
+    for stream in (sys.stdout, sys.stderr):
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="replace")  # a terminal of few characters shows "?" instead of failing
+    app()

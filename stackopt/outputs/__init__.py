@@ -1,0 +1,1 @@
+"""What people get to see: tables, plots, progress and cautions. The only package that draws."""

@@ -1,0 +1,170 @@
+"""The plots of a problem: trade-off of a front, and curves of chosen stacks."""
+
+from __future__ import annotations
+
+import itertools
+import math
+import os
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.figure import Figure, SubFigure
+from matplotlib.lines import Line2D
+from numpy.typing import NDArray
+
+from stackopt.front import Front, FrontRow
+from stackopt.outputs import plot_style as style
+from stackopt.outputs.words import ends, totals_words, where_words, wrap_stack
+from stackopt.prediction import Prediction, predict
+from stackopt.problem import Problem, Stack
+
+Real = NDArray[np.float64]
+SMOOTH = 6
+"""Points per decade of a drawn curve over those of the search grid."""
+_SCALES = {"thickness": 1e3}
+
+
+def write_trade_off(front: Front, path: str | os.PathLike[str]) -> None:
+    """Write the figure of `trade_off_figure`.
+
+    Raises
+    ------
+    InputError
+        When the file cannot be written.
+    """
+    style.save_figure(trade_off_figure(front), path)
+
+
+def write_prediction_plot(problem: Problem, stacks: Sequence[Stack], path: str | os.PathLike[str]) -> None:
+    """Write the figure of `prediction_figure`.
+
+    Raises
+    ------
+    InputError
+        When the file cannot be written.
+    """
+    style.save_figure(prediction_figure(problem, stacks), path)
+
+
+def trade_off_figure(front: Front) -> Figure:
+    """Draw a front: each pair of objectives, and beside them the attenuation of the best stack of each objective.
+
+    Parameters
+    ----------
+    front : Front
+        With a single objective, margin takes the place of the second one.
+    """
+    problem = front.problem
+    pairs = _pairs(problem.search.objectives)
+    best = ends(front.rows, problem.search.objectives)
+    columns = math.ceil(len(pairs) / 3)
+    rows = math.ceil(len(pairs) / columns)
+    legend_lines = sum(2 + len(wrap_stack(front.rows[index].stack, 100)) for index in best) + 2
+    height = max(2.5 * rows, 3.4 * len(problem.requirements), 4.2) + 0.9 + 0.17 * legend_lines
+    figure = style.new_figure(4.2 * columns + 7.2, height)
+    figure.suptitle(_heading(front, 60 * columns + 60), fontsize=11)
+    left, right = np.ravel(figure.subfigures(1, 2, squeeze=False, width_ratios=[4.2 * columns, 7.2]))
+    panels = np.ravel(left.subplots(rows, columns, squeeze=False))
+    for axes, pair in zip(panels, pairs, strict=False):
+        _draw_pair(axes, front, pair, best)
+    for axes in panels[len(pairs) :]:
+        axes.set_axis_off()
+    _draw_requirements(right, predict(problem, [front.rows[index].stack for index in best], SMOOTH), problem)
+    _legend(figure, [_end_label(front, index, words) for index, words in best.items()], ["stacks of the front"])
+    return figure
+
+
+def prediction_figure(problem: Problem, stacks: Sequence[Stack]) -> Figure:
+    """Draw the attenuation of stacks over each other, against the mask of each requirement.
+
+    Parameters
+    ----------
+    problem : Problem
+    stacks : sequence of Stack
+        Each gets its colour, marker and line style.
+    """
+    labels = ["\n".join(wrap_stack(stack, 100)) for stack in stacks]
+    lines = sum(label.count("\n") + 1 for label in labels) + 1
+    figure = style.new_figure(9.0, 3.6 * len(problem.requirements) + 0.6 + 0.18 * lines)
+    figure.suptitle(style.wrapped(f"Predicted attenuation: {problem.title}", 90), fontsize=11)
+    _draw_requirements(figure, predict(problem, stacks, SMOOTH), problem)
+    _legend(figure, labels)
+    return figure
+
+
+def _heading(front: Front, width: int) -> str:
+    count = len(front.rows)
+    state = "complete, proved" if front.complete else "not proved complete"
+    stacks = "no stack" if count == 0 else "1 stack" if count == 1 else f"{count:,} stacks"
+    return style.wrapped(f"{front.problem.title}: front of {stacks}, {state}", width)
+
+
+def _pairs(objectives: Sequence[str]) -> list[tuple[str, str]]:
+    return list(itertools.combinations(objectives, 2)) or [
+        (objectives[0], "margin" if objectives[0] != "margin" else "mass")
+    ]
+
+
+def _draw_pair(axes: Axes, front: Front, pair: tuple[str, str], best: dict[int, str]) -> None:
+    x, y = (np.array([row.objective(name) * _SCALES.get(name, 1.0) for row in front.rows]) for name in pair)
+    size = 26.0 if len(x) <= 60 else 12.0
+    axes.scatter(x, y, s=size, facecolor="#bbbbbb", edgecolor=style.GREY, linewidth=0.6, zorder=2.0)
+    for number, index in enumerate(best):
+        look = style.line_style(number)
+        axes.plot(x[index], y[index], color=look["color"], marker=look["marker"], markersize=9.0, zorder=3.0 + number)
+    axes.set_xlabel(_axis_label(pair[0], front.problem.currency))
+    axes.set_ylabel(_axis_label(pair[1], front.problem.currency))
+    axes.grid(color="#e4e4e4", linewidth=0.6)
+    axes.set_axisbelow(True)
+    axes.margins(0.08)
+    style.plain_ticks(axes)
+
+
+def _axis_label(objective: str, currency: str) -> str:
+    units = {"mass": "kg/m²", "cost": f"{currency}/m²", "thickness": "mm", "margin": "dB"}
+    return f"{objective}, {units[objective]}" if objective in units else objective
+
+
+def _end_label(front: Front, index: int, words: str) -> str:
+    row: FrontRow = front.rows[index]
+    stack = "\n".join(wrap_stack(row.stack, 100))
+    totals = totals_words(row, front.problem.currency).replace("m^2", "m²")
+    where = where_words(row, front.problem)
+    return f"{words} (rank {index + 1}): {totals}, margin {row.margin_db:+.2f} dB {where}\n{stack}"
+
+
+def _draw_requirements(figure: Figure | SubFigure, predictions: Sequence[Prediction], problem: Problem) -> None:
+    """Draw the curves of all predictions into one set of axes for each requirement, below each other."""
+    count = len(problem.requirements)
+    for number, axes in enumerate(np.ravel(figure.subplots(count, 1, squeeze=False))):
+        requirement = problem.requirements[number]
+        grid = requirement.mask.grid_hz(SMOOTH)
+        axis = style.FrequencyAxis(grid)
+        required = requirement.mask.required_db(grid)
+        curves = [prediction.curves[number].attenuation_db for prediction in predictions]
+        everything = np.concatenate([required, *curves])
+        style.draw_mask(axes, axis, grid, required)
+        for index, attenuation in enumerate(curves):
+            style.draw_curve(axes, axis, grid, style.measurable(attenuation), index)
+        axis.apply(axes)
+        style.attenuation_axis(axes, float(everything.min()), float(everything.max()))
+        axes.grid(color="#e4e4e4", linewidth=0.6)
+        axes.set_axisbelow(True)
+        axes.set_title(style.wrapped(f"{requirement.name} ({requirement.field.kind})", 70), fontsize=10, loc="left")
+
+
+def _legend(figure: Figure, labels: Sequence[str], points: Sequence[str] = ()) -> None:
+    """Put the legend below everything, where it covers nothing."""
+    dot: dict[str, Any] = {
+        "marker": "o",
+        "linestyle": "none",
+        "markerfacecolor": "#bbbbbb",
+        "markeredgecolor": style.GREY,
+    }
+    handles = [style.legend_line(number, label) for number, label in enumerate(labels)]
+    handles += [Line2D([], [], label=label, **dot) for label in points]
+    figure.legend(
+        handles=[*handles, style.mask_patch()], loc="outside lower center", fontsize=9, frameon=False, handlelength=3.0
+    )

@@ -250,13 +250,14 @@ def _parse_stacks(texts: list[str], problem: Problem) -> list[Stack]:
 def _show_result(result: RunResult) -> None:
     from stackopt.outputs.console import make_console
     from stackopt.outputs.report import short_path
-    from stackopt.outputs.tables import front_table
+    from stackopt.outputs.tables import front_text
 
     console, front = make_console(), result.front
     folder = short_path(result.folder)
     if len(front):
         _show_cautions(console, front.problem, [row.stack for row in front.rows])
-        console.print(front_table(front, console.width, rest_in=os.path.join(folder, "front.csv")))
+        text = front_text(front, console.width, rest_in=os.path.join(folder, "front.csv"))
+        console.print(text + "\n", soft_wrap=True)
     console.print(front.statement)
     console.print(f"Files: {folder}")
     if not len(front):

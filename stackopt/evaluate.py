@@ -16,6 +16,7 @@ from stackopt.errors import InputError
 from stackopt.model import media, spectral_lines, with_bonds
 from stackopt.physics import fields
 from stackopt.problem import Problem, Sheet, Stack
+from stackopt.readers import parse_stack
 
 Real = NDArray[np.float64]
 Integers = NDArray[np.int64]
@@ -135,7 +136,7 @@ def excess(compiled: CompiledProblem, codes: Integers, totals: Integers) -> Real
 
 def attenuation(
     problem: Problem,
-    stacks: Sequence[Stack | Sequence[tuple[str, float]]],
+    stacks: Sequence[str | Stack | Sequence[tuple[str, float]]],
     requirement: int = 0,
     frequency_hz: Real | None = None,
 ) -> Real:
@@ -145,7 +146,8 @@ def attenuation(
     ----------
     problem : Problem
     stacks : sequence of stacks
-        Each a sequence of sheets or of (material, thickness in m), source side first; bonds are added as in the search.
+        Each a text such as ``"steel 150um / copper 35um"``, or a sequence of sheets or of (material, thickness in m),
+        source side first; bonds are added as in the search.
     requirement : int
         Number of the requirement whose field is used.
     frequency_hz : ndarray, shape (frequency,), optional
@@ -170,6 +172,8 @@ def attenuation(
     victim = media(problem, problem.rules.victim_side, grid)
     result = np.empty((len(stacks), len(grid)))
     for number, given in enumerate(stacks):
+        if isinstance(given, str):
+            given = parse_stack(given, problem.materials)
         stack = tuple(sheet if isinstance(sheet, Sheet) else Sheet(*sheet) for sheet in given)
         for sheet in stack:
             if sheet.material not in problem.materials or not sheet.thickness_m > 0.0:

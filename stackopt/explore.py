@@ -98,7 +98,9 @@ def mutate(stock: Stock, genes: Integers, random: np.random.Generator) -> Intege
     """Change each stack once, at random."""
     result = genes.copy()
     m = stock.positions
-    for row, change in zip(result, random.choice(6, size=len(result), p=[0.2, 0.3, 0.15, 0.12, 0.13, 0.1]), strict=True):
+    for row, change in zip(
+        result, random.choice(6, size=len(result), p=[0.2, 0.3, 0.15, 0.12, 0.13, 0.1]), strict=True
+    ):
         codes = row[:m]
         used = int(np.count_nonzero(codes))
         at = int(random.integers(used)) if used else 0
@@ -150,7 +152,9 @@ def _step_material(stock: Stock, row: Integers, at: int, random: np.random.Gener
 class _SameGenes(DuplicateElimination):  # type: ignore[misc]
     """Finds equal genes exactly."""
 
-    def _do(self, population: Population, other: Population | None, is_duplicate: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    def _do(
+        self, population: Population, other: Population | None, is_duplicate: NDArray[np.bool_]
+    ) -> NDArray[np.bool_]:
         seen = set() if other is None else {genes.tobytes() for genes in other.get("X").astype(np.int64)}
         for number, genes in enumerate(population.get("X").astype(np.int64)):
             key = genes.tobytes()
@@ -213,9 +217,11 @@ class Explorer:
         The search's seed; the result depends on it and on the problem only.
     population : int
         Stacks on each island.
+    look : bool
+        Whether to start from a quick look for the largest margin.
     """
 
-    def __init__(self, stock: Stock, seed: int, population: int) -> None:
+    def __init__(self, stock: Stock, seed: int, population: int, look: bool = True) -> None:
         self.stock, self.seed = stock, seed
         self.archive = Archive(len(stock.compiled.problem.search.objectives), 2 * stock.positions)
         self.computed = 0
@@ -224,7 +230,8 @@ class Explorer:
         self._polished: set[bytes] = set()
         random = np.random.default_rng((seed, 0))
         self.populations = [random_genes(stock, population, random) for _ in range(ISLANDS)]
-        self._start_from_scout()
+        if look:
+            self._start_from_scout()
 
     @property
     def finished(self) -> bool:
@@ -255,6 +262,11 @@ class Explorer:
             for genes in fresh:
                 self._polished.add(genes.tobytes())
                 self.computed += record(self.stock, self.archive, neighbours(self.stock, genes)).computed
+
+    def take(self, genes: Integers) -> None:
+        """Judge stacks known from elsewhere, keep the feasible ones, and polish them."""
+        self.computed += record(self.stock, self.archive, self.stock.tidy(genes)).computed
+        self.polish()
 
     def state(self) -> dict[str, NDArray[np.int64]]:
         """Return the state between epochs as plain arrays."""
@@ -334,9 +346,7 @@ def neighbours(stock: Stock, genes: Integers) -> Integers:
             inserted[:, m + place] = thicknesses[1:]
             found.append(inserted)
     width = 2 * m
-    padded = [
-        part if part.shape[1] == width else np.insert(part, [m - 1, 2 * m - 2], 0, axis=1) for part in found
-    ]
+    padded = [part if part.shape[1] == width else np.insert(part, [m - 1, 2 * m - 2], 0, axis=1) for part in found]
     return np.unique(stock.tidy(np.concatenate(padded)), axis=0)
 
 

@@ -70,15 +70,15 @@ class Front:
         Proved: no stack the problem allows dominates or is missing from the front.
     statement : str
         One sentence for the user about how far the front can be trusted.
-    equals : tuple of (int, Stack)
-        Other stacks that reach exactly the objectives of a row, as (rank, stack); ranks count from 1.
+    equals : tuple of (int, FrontRow)
+        Other stacks that reach exactly the objectives of a row, as (rank, row); ranks count from 1.
     """
 
     problem: Problem
     rows: tuple[FrontRow, ...]
     complete: bool = False
     statement: str = ""
-    equals: tuple[tuple[int, Stack], ...] = ()
+    equals: tuple[tuple[int, FrontRow], ...] = ()
 
     def __len__(self) -> int:
         return len(self.rows)

@@ -36,7 +36,9 @@ def why_not_provable(problem: Problem) -> str | None:
     """Say in one sentence why a problem's front cannot be proved, or return None where it can."""
     others = [name for name in problem.search.objectives if name not in PROVABLE_OBJECTIVES]
     if others:
-        return f"the objective {others[0]} does not only grow with every sheet, so the front can be explored, not proved"
+        return (
+            f"the objective {others[0]} does not only grow with every sheet, so the front can be explored, not proved"
+        )
     if problem.continuous:
         names = ", ".join(problem.continuous)
         return f"{names}: a thickness_range allows endless thicknesses, so the front can be explored, not proved"
@@ -73,11 +75,13 @@ class Prover:
     archive : Archive
         Feasible stacks known so far: an accelerator, and what the proof completes, in place. Codes have one number per
         position.
+    tally : Tally, optional
+        Added to.
     """
 
-    def __init__(self, compiled: CompiledProblem, archive: Archive) -> None:
+    def __init__(self, compiled: CompiledProblem, archive: Archive, tally: Tally | None = None) -> None:
         self.compiled, self.archive = compiled, archive
-        self.tally = Tally()
+        self.tally = Tally() if tally is None else tally
         self.tables = _Tables(compiled)
         self.shares = list(_shares(len(compiled.sheets), compiled.rules.max_sheets))
         self.done = np.zeros(len(self.shares), dtype=bool)
@@ -262,7 +266,9 @@ def mirror_holds(compiled: CompiledProblem) -> bool:
     """
     rules, problem = compiled.rules, compiled.problem
     bare = not problem.rules.source_side and not problem.rules.victim_side
-    return bare and bool(np.array_equal(rules.first, rules.last) and np.array_equal(rules.neighbours, rules.neighbours.T))
+    return bare and bool(
+        np.array_equal(rules.first, rules.last) and np.array_equal(rules.neighbours, rules.neighbours.T)
+    )
 
 
 def _closing(compiled: CompiledProblem, table: Real) -> Real:

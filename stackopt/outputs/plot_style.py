@@ -9,11 +9,12 @@ from typing import Any
 
 import numpy as np
 from matplotlib.axes import Axes
+from matplotlib.axis import XAxis, YAxis
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from matplotlib.patches import Patch
-from matplotlib.ticker import FixedLocator, FuncFormatter, LogLocator, NullFormatter
+from matplotlib.ticker import FixedLocator, FuncFormatter, MaxNLocator, NullFormatter, ScalarFormatter
 from numpy.typing import NDArray
 
 from stackopt.outputs.files import write_whole
@@ -99,7 +100,7 @@ class FrequencyAxis:
         ticks = self._ticks()
         axes.xaxis.set_major_locator(FixedLocator([self.static_at, *ticks] if self.has_static else ticks))
         axes.xaxis.set_major_formatter(FuncFormatter(self._label))
-        axes.xaxis.set_minor_locator(LogLocator(subs=tuple(range(2, 10)), numticks=100))
+        axes.xaxis.set_minor_locator(FixedLocator(self._minor_ticks()))
         axes.xaxis.set_minor_formatter(NullFormatter())
         axes.set_xlabel("frequency")
         if self.has_static:
@@ -111,6 +112,11 @@ class FrequencyAxis:
         if len(decades) < 2:
             return sorted({self.low, self.high})
         return decades[:: 1 + (len(decades) - 1) // 7]
+
+    def _minor_ticks(self) -> list[float]:
+        exponents = np.arange(np.floor(np.log10(self.low)), np.ceil(np.log10(self.high)) + 1.0)
+        ticks = np.outer(10.0**exponents, np.arange(1.0, 10.0)).ravel()
+        return [float(tick) for tick in ticks if self.low <= tick <= self.high]
 
     def _label(self, value: float, _: int | None = None) -> str:
         return "0 Hz" if self.has_static and value < self.low / 1.01 else format_frequency(value)
@@ -137,7 +143,7 @@ def measurable(attenuation_db: Real) -> Real:
 def attenuation_axis(axes: Axes, lowest_db: float, highest_db: float) -> None:
     """Scale an attenuation axis to the given range, dB; what is beyond the measurable becomes a band."""
     axes.set_ylabel("attenuation, dB")
-    bottom = min(0.0, float(np.floor(lowest_db / 10.0)) * 10.0)
+    bottom = 0.0 if lowest_db > -1.0 else float(np.floor(lowest_db / 20.0)) * 20.0
     if highest_db <= HIGHEST_DB:
         axes.set_ylim(bottom, min(float(np.ceil((highest_db + 3.0) / 10.0)) * 10.0, HIGHEST_DB))
         return
@@ -163,9 +169,13 @@ def draw_mask(axes: Axes, axis: FrequencyAxis, frequency_hz: Real, required_db: 
         axes.plot(x, y, **MASK_EDGE, zorder=1.5)
 
 
-def plain_ticks(axes: Axes) -> None:
-    """Write tick numbers in full, without offsets."""
-    axes.ticklabel_format(useOffset=False, style="plain")
+def number_axis(axis: XAxis | YAxis, values: Real, whole: bool = False) -> None:
+    """Write the ticks of an axis in full, and give a single value room on both sides."""
+    axis.set_major_locator(MaxNLocator(nbins=6, steps=[1, 2, 2.5, 5, 10], integer=whole))
+    axis.set_major_formatter(ScalarFormatter(useOffset=False))
+    if len(values) and np.ptp(values) == 0.0:
+        room = max(abs(float(values[0])), 1e-9) / 2.0
+        axis.set_view_interval(values[0] - room, values[0] + room, ignore=True)
 
 
 def wrapped(text: str, width: int, most_lines: int = 3) -> str:

@@ -23,6 +23,9 @@ from stackopt.problem import Problem, Stack
 Real = NDArray[np.float64]
 SMOOTH = 6
 """Points per decade of a drawn curve over those of the search grid."""
+LABEL_WIDTH = 90
+"""Characters of a legend line."""
+PAIR_WIDTH_IN, CURVES_WIDTH_IN = 4.2, 7.2
 _SCALES = {"thickness": 1e3}
 
 
@@ -54,25 +57,29 @@ def trade_off_figure(front: Front) -> Figure:
     Parameters
     ----------
     front : Front
-        With a single objective, margin takes the place of the second one.
+        With a single objective only the curves are drawn.
     """
     problem = front.problem
-    pairs = _pairs(problem.search.objectives)
+    pairs = list(itertools.combinations(problem.search.objectives, 2)) if front.rows else []
     best = ends(front.rows, problem.search.objectives)
-    columns = math.ceil(len(pairs) / 3)
-    rows = math.ceil(len(pairs) / columns)
-    legend_lines = sum(2 + len(wrap_stack(front.rows[index].stack, 100)) for index in best) + 2
-    height = max(2.5 * rows, 3.4 * len(problem.requirements), 4.2) + 0.9 + 0.17 * legend_lines
-    figure = style.new_figure(4.2 * columns + 7.2, height)
-    figure.suptitle(_heading(front, 60 * columns + 60), fontsize=11)
-    left, right = np.ravel(figure.subfigures(1, 2, squeeze=False, width_ratios=[4.2 * columns, 7.2]))
-    panels = np.ravel(left.subplots(rows, columns, squeeze=False))
-    for axes, pair in zip(panels, pairs, strict=False):
-        _draw_pair(axes, front, pair, best)
-    for axes in panels[len(pairs) :]:
-        axes.set_axis_off()
-    _draw_requirements(right, predict(problem, [front.rows[index].stack for index in best], SMOOTH), problem)
-    _legend(figure, [_end_label(front, index, words) for index, words in best.items()], ["stacks of the front"])
+    labels = [_end_label(front, index, words) for index, words in best.items()]
+    columns = min(math.ceil(len(pairs) / 3), 3)
+    rows = math.ceil(len(pairs) / max(columns, 1))
+    height = max(2.5 * rows, 3.4 * len(problem.requirements), 4.2) + 1.2 + 0.18 * _count_lines(labels)
+    figure = style.new_figure(PAIR_WIDTH_IN * columns + CURVES_WIDTH_IN, height)
+    figure.suptitle(_heading(front, 50 * columns + 70), fontsize=11)
+    curves: Figure | SubFigure = figure
+    if pairs:
+        widths = [PAIR_WIDTH_IN * columns, CURVES_WIDTH_IN]
+        left, curves = np.ravel(figure.subfigures(1, 2, squeeze=False, width_ratios=widths))
+        panels = np.ravel(left.subplots(rows, columns, squeeze=False))
+        for axes, pair in zip(panels, pairs, strict=False):
+            _draw_pair(axes, front, pair, best)
+        for axes in panels[len(pairs) :]:
+            axes.set_axis_off()
+    stacks = [front.rows[index].stack for index in best]
+    _draw_requirements(curves, predict(problem, stacks, SMOOTH), problem)
+    _legend(figure, labels, ["stacks of the front"] if pairs else [])
     return figure
 
 
@@ -85,9 +92,9 @@ def prediction_figure(problem: Problem, stacks: Sequence[Stack]) -> Figure:
     stacks : sequence of Stack
         Each gets its colour, marker and line style.
     """
-    labels = ["\n".join(wrap_stack(stack, 100)) for stack in stacks]
-    lines = sum(label.count("\n") + 1 for label in labels) + 1
-    figure = style.new_figure(9.0, 3.6 * len(problem.requirements) + 0.6 + 0.18 * lines)
+    labels = [f"{n}: " + "\n".join(wrap_stack(stack, LABEL_WIDTH)) for n, stack in enumerate(stacks, start=1)]
+    height = 3.6 * len(problem.requirements) + 0.8 + 0.18 * _count_lines(labels)
+    figure = style.new_figure(9.0, height)
     figure.suptitle(style.wrapped(f"Predicted attenuation: {problem.title}", 90), fontsize=11)
     _draw_requirements(figure, predict(problem, stacks, SMOOTH), problem)
     _legend(figure, labels)
@@ -97,14 +104,14 @@ def prediction_figure(problem: Problem, stacks: Sequence[Stack]) -> Figure:
 def _heading(front: Front, width: int) -> str:
     count = len(front.rows)
     state = "complete, proved" if front.complete else "not proved complete"
-    stacks = "no stack" if count == 0 else "1 stack" if count == 1 else f"{count:,} stacks"
-    return style.wrapped(f"{front.problem.title}: front of {stacks}, {state}", width)
+    if count == 0:
+        return f"{style.wrapped(front.problem.title, width)}\nno stack that meets the mask"
+    stacks = "1 stack" if count == 1 else f"{count:,} stacks"
+    return f"{style.wrapped(front.problem.title, width)}\nfront of {stacks}, {state}"
 
 
-def _pairs(objectives: Sequence[str]) -> list[tuple[str, str]]:
-    return list(itertools.combinations(objectives, 2)) or [
-        (objectives[0], "margin" if objectives[0] != "margin" else "mass")
-    ]
+def _count_lines(labels: Sequence[str]) -> int:
+    return sum(label.count("\n") + 1 for label in labels)
 
 
 def _draw_pair(axes: Axes, front: Front, pair: tuple[str, str], best: dict[int, str]) -> None:
@@ -112,14 +119,16 @@ def _draw_pair(axes: Axes, front: Front, pair: tuple[str, str], best: dict[int, 
     size = 26.0 if len(x) <= 60 else 12.0
     axes.scatter(x, y, s=size, facecolor="#bbbbbb", edgecolor=style.GREY, linewidth=0.6, zorder=2.0)
     for number, index in enumerate(best):
-        look = style.line_style(number)
-        axes.plot(x[index], y[index], color=look["color"], marker=look["marker"], markersize=9.0, zorder=3.0 + number)
+        look = style.line_style(number) | {"linestyle": "none", "markeredgecolor": "white", "markeredgewidth": 0.8}
+        size = max(12.0 - 1.0 * number, 8.0)  # ends close to each other stay visible
+        axes.plot(x[index], y[index], **look, markersize=size, zorder=3.0 + number)
     axes.set_xlabel(_axis_label(pair[0], front.problem.currency))
     axes.set_ylabel(_axis_label(pair[1], front.problem.currency))
     axes.grid(color="#e4e4e4", linewidth=0.6)
     axes.set_axisbelow(True)
     axes.margins(0.08)
-    style.plain_ticks(axes)
+    for values, axis, name in ((x, axes.xaxis, pair[0]), (y, axes.yaxis, pair[1])):
+        style.number_axis(axis, values, whole=name == "sheets")
 
 
 def _axis_label(objective: str, currency: str) -> str:
@@ -129,7 +138,7 @@ def _axis_label(objective: str, currency: str) -> str:
 
 def _end_label(front: Front, index: int, words: str) -> str:
     row: FrontRow = front.rows[index]
-    stack = "\n".join(wrap_stack(row.stack, 100))
+    stack = "\n".join(wrap_stack(row.stack, LABEL_WIDTH))
     totals = totals_words(row, front.problem.currency).replace("m^2", "m²")
     where = where_words(row, front.problem)
     return f"{words} (rank {index + 1}): {totals}, margin {row.margin_db:+.2f} dB {where}\n{stack}"

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import os
+import textwrap
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -12,7 +13,7 @@ import numpy as np
 from rich.box import SIMPLE_HEAD
 from rich.table import Table
 
-from stackopt.front import Front, FrontRow
+from stackopt.front import Front, FrontRow, rows_to_frame
 from stackopt.outputs.files import write_whole
 from stackopt.outputs.words import ends, margin_words, wrap_stack
 from stackopt.prediction import Curve, Prediction
@@ -26,7 +27,8 @@ PREDICTION_COLUMNS = ("requirement", "frequency_hz", "attenuation_db", "required
 """Columns of a prediction's CSV; ``stack`` comes before them when there are several stacks."""
 MAX_ROWS = 25
 """Longest front that the terminal shows in full."""
-_NARROWEST_STACK = 16
+_NARROWEST_STACK = 44
+"""Characters that stacks need to stand beside their numbers."""
 
 
 def write_front(front: Front, path: str | os.PathLike[str]) -> None:
@@ -38,6 +40,19 @@ def write_front(front: Front, path: str | os.PathLike[str]) -> None:
         When the file cannot be written.
     """
     _write_frame(front.to_frame(), path)
+
+
+def write_equals(front: Front, path: str | os.PathLike[str]) -> None:
+    """Write front_equals.csv: the other stacks that reach exactly the objectives of a row of the front, by its rank.
+
+    Raises
+    ------
+    InputError
+        When the file cannot be written.
+    """
+    frame = rows_to_frame([row for _, row in front.equals])
+    frame["rank"] = [rank for rank, _ in front.equals]
+    _write_frame(frame, path)
 
 
 def write_predictions(predictions: Sequence[Prediction], path: str | os.PathLike[str]) -> None:
@@ -81,8 +96,10 @@ def prediction_frame(predictions: Sequence[Prediction]) -> pd.DataFrame:
     return pd.concat(parts, ignore_index=True)
 
 
-def front_table(front: Front, width: int, rest_in: str = "front.csv") -> Table:
-    """Show a front, shortened when it is long.
+def front_text(front: Front, width: int, rest_in: str = "front.csv") -> str:
+    """Write a front as a table in plain text, shortened when it is long.
+
+    Stacks stand at the end of their line, or below it where the line is too short for them.
 
     Parameters
     ----------
@@ -93,30 +110,38 @@ def front_table(front: Front, width: int, rest_in: str = "front.csv") -> Table:
         Where the full front is, told when rows are left out.
     """
     chosen = shown_rows(front)
-    currency, several = front.problem.currency, len(front.problem.requirements) > 1
-    columns = {
-        "rank": [str(index + 1) for index in chosen],
-        "sheets": [str(front.rows[index].sheets) for index in chosen],
-        "mass\nkg/m^2": [f"{front.rows[index].mass_kg_per_m2:.3f}" for index in chosen],
-        f"cost\n{currency}/m^2": [_cost(front.rows[index]) for index in chosen],
-        "thick\nmm": [f"{front.rows[index].thickness_m * 1e3:.3f}" for index in chosen],
-        "margin\ndB": [f"{front.rows[index].margin_db:+.2f}" for index in chosen],
-        "tightest": [format_frequency(front.rows[index].tightest_hz) for index in chosen],
-    }
-    if several:
-        columns["requirement"] = [front.rows[index].requirement for index in chosen]
-    taken = sum(max(map(len, [*head.split("\n"), *cells])) + 2 for head, cells in columns.items())
-    room = max(width - taken, _NARROWEST_STACK)
-    cells = list(zip(*columns.values(), strict=True))
-    table = plain_table()
-    for head in columns:
-        table.add_column(head, justify="left" if head == "requirement" else "right", no_wrap=head != "requirement")
-        if head == "rank":
-            table.add_column("stack, source side first", overflow="fold")
-    for index, row in zip(chosen, cells, strict=True):
-        table.add_row(row[0], "\n".join(wrap_stack(front.rows[index].stack, room)), *row[1:])
-    table.caption = "\n".join(_front_notes(front, chosen, rest_in)) or None
-    return table
+    columns = _front_columns(front, chosen)
+    widths = [max(map(len, column)) for column in columns]
+    numbers = ["  ".join(map(str.rjust, cells, widths)) for cells in zip(*columns, strict=True)]
+    indent = sum(widths) + 2 * len(widths)
+    beside = width - indent >= _NARROWEST_STACK
+    if not beside:
+        indent = widths[0] + 2
+    lines = [numbers[0] + ("  stack, source side first" if beside else ""), numbers[1]]
+    lines.append("─" * min(width, max(map(len, lines)) if not beside else width))
+    for index, head in zip(chosen, numbers[2:], strict=True):
+        parts = wrap_stack(front.rows[index].stack, width - indent)
+        lines.append(f"{head}  {parts.pop(0)}" if beside else head)
+        lines += [" " * indent + part for part in parts]
+    notes = [] if beside else ["Stacks are written from the source side to the victim side."]
+    return "\n".join(line.rstrip() for line in [*lines, "", *notes, *_front_notes(front, chosen, rest_in)])
+
+
+def _front_columns(front: Front, chosen: Sequence[int]) -> list[list[str]]:
+    """Two lines of heading and the cells of each column but the stacks'."""
+    rows = [front.rows[index] for index in chosen]
+    columns = [
+        ["rank", "", *(str(index + 1) for index in chosen)],
+        ["sheets", "", *(str(row.sheets) for row in rows)],
+        ["mass", "kg/m^2", *(f"{row.mass_kg_per_m2:.3f}" for row in rows)],
+        ["cost", f"{front.problem.currency}/m^2", *map(_cost, rows)],
+        ["thickness", "mm", *(f"{row.thickness_m * 1e3:.3f}" for row in rows)],
+        ["margin", "dB", *(f"{row.margin_db:+.2f}" for row in rows)],
+        ["tightest", "", *(format_frequency(row.tightest_hz) for row in rows)],
+    ]
+    if len(front.problem.requirements) > 1:
+        columns.append(["requirement", "", *(textwrap.shorten(row.requirement, 20, placeholder="...") for row in rows)])
+    return columns
 
 
 def shown_rows(front: Front, limit: int = MAX_ROWS) -> list[int]:

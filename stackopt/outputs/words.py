@@ -110,7 +110,8 @@ def law_words(law: PermeabilityLaw) -> str:
     if isinstance(law, Constant):
         return f"constant {number_words(law.value)}"
     if isinstance(law, Debye):
-        return f"debye: {number_words(law.initial)}, relaxation {format_frequency(law.relaxation_hz)}{_limit(law.high_frequency)}"
+        relaxation = format_frequency(law.relaxation_hz)
+        return f"debye: {number_words(law.initial)}, relaxation {relaxation}{_limit(law.high_frequency)}"
     if isinstance(law, ColeCole):
         return (
             f"cole-cole: {number_words(law.initial)}, relaxation {format_frequency(law.relaxation_hz)}, "

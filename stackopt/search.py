@@ -1,0 +1,334 @@
+"""The phases of a search on one problem: explore, prove, confirm, and again until every stack of the front is confirmed.
+
+A round works on a grid of frequencies and a quadrature. Confirming judges the front on a grid ten times denser with a
+finer quadrature; where a stack fails, its worst frequency joins the grid of the next round (or, if it is in the grid
+already, the quadrature is refined). Fewer frequencies only relax the problem, so a proved front whose every stack passes
+is the complete front of the dense grid too.
+"""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from stackopt import evaluate
+from stackopt.archive import Archive
+from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_UNIT, compile_problem
+from stackopt.explore import Explorer
+from stackopt.front import Front, FrontRow
+from stackopt.problem import Problem, Stack
+from stackopt.prove import Prover, Tally, count_stacks, why_not_provable
+from stackopt.scout import scout
+from stackopt.status import Status, Watcher
+from stackopt.stock import Stock
+from stackopt.units import format_frequency
+
+Integers = NDArray[np.int64]
+
+SEARCH_ERROR_DB = 2e-3
+"""Quadrature error of the first round, dB."""
+DENSITY = 10
+"""The confirmation's points for every point of the search grid."""
+MAX_ROUNDS = 60
+
+
+@dataclass(frozen=True)
+class _Confirmed:
+    """Stacks of a front judged on the dense grid: row of each, margin, and where it is tightest."""
+
+    rows: Integers
+    stacks: list[Stack]
+    margin_db: NDArray[np.float64]
+    frequency_hz: NDArray[np.float64]
+    requirement: Integers
+
+
+class Search:
+    """A search and its state between steps.
+
+    Parameters
+    ----------
+    problem : Problem
+    seed : int, optional
+        Instead of the problem's own.
+    workers : int
+        Threads for the proof.
+    """
+
+    def __init__(self, problem: Problem, seed: int | None = None, workers: int = 1) -> None:
+        self.problem, self.workers = problem, workers
+        self.seed = problem.search.random_seed if seed is None else seed
+        self.obstacle = why_not_provable(problem)
+        self.extra_hz: list[list[float]] = [[] for _ in problem.requirements]
+        self.error_db = SEARCH_ERROR_DB
+        self.round = 0
+        self.exploring = True
+        self.seconds = {"exploring": 0.0, "proving": 0.0, "confirming": 0.0}
+        self.tally = Tally()
+        self.prover: Prover | None = None
+        self._begin_round()
+
+    def run(
+        self, watcher: Watcher = lambda _: None, deadline: float = np.inf, save: Callable[[], None] = lambda: None
+    ) -> Front:
+        """Run to the end or to the deadline (`time.monotonic`).
+
+        ``save`` is called wherever the state may be saved. The watcher may raise to interrupt; the state then is that
+        of the last call of ``save`` or later, and still good.
+        """
+        while True:
+            self._explore(watcher, deadline, save)
+            self._prove(watcher, deadline, save)
+            watcher(Status("confirming", front_size=len(self.archive)))
+            started = time.monotonic()
+            confirmed = self._confirm()
+            self.seconds["confirming"] += time.monotonic() - started
+            failed = self._failures(confirmed)
+            out_of_time = time.monotonic() >= deadline or self.round >= MAX_ROUNDS
+            if not failed or out_of_time:
+                return self._front(confirmed, bool(failed))
+            self._refine(failed)
+            save()
+
+    def start_from(self, stacks: list[Stack]) -> None:
+        """Skip exploring and prove from stacks known already; those that are no stacks of the problem are passed over."""
+        known = set(self.compiled.sheets)
+        usable = [stack for stack in stacks if set(stack) <= known and len(stack) <= self.compiled.rules.max_sheets]
+        if usable:
+            codes = evaluate.encode(self.compiled, usable)
+            self.explorer.take(np.concatenate([codes, np.zeros_like(codes)], axis=1))
+        self.exploring = False
+
+    def proof_record(self) -> dict[str, Any] | None:
+        """How the front was proved, for the run's record; None where nothing was."""
+        if self.prover is None:
+            return None
+        return {
+            "stacks": count_stacks(len(self.compiled.sheets), self.compiled.rules.max_sheets),
+            "share_settled": self.prover.covered,
+            "mirror_images_skipped": self.prover.tables.mirror,
+            "prefixes_opened": self.tally.opened,
+            "stacks_evaluated": self.tally.judged,
+            "seconds": round(self.tally.seconds, 3),
+        }
+
+    # State ------------------------------------------------------------------------------------------------------------
+
+    def state(self) -> tuple[dict[str, NDArray[Any]], dict[str, Any]]:
+        """Everything needed to go on, as arrays and JSON values."""
+        arrays = dict(self.explorer.state())
+        if self.prover is not None:
+            arrays |= {
+                "proof_done": self.prover.done,
+                "proof_values": self.archive.values,
+                "proof_codes": self.archive.codes,
+            }
+        text = {
+            "seed": self.seed,
+            "round": self.round,
+            "extra_hz": self.extra_hz,
+            "error_db": self.error_db,
+            "exploring": self.exploring,
+            "seconds": self.seconds,
+            "tally": vars(self.tally),
+        }
+        return arrays, text
+
+    def restore(self, arrays: Mapping[str, NDArray[Any]], text: Mapping[str, Any]) -> None:
+        """Go on from a state of the same problem."""
+        self.seed, self.round, self.error_db = text["seed"], text["round"], text["error_db"]
+        self.extra_hz, self.exploring = text["extra_hz"], text["exploring"]
+        self.seconds, self.tally = dict(text["seconds"]), Tally(**text["tally"])
+        self.compiled = compile_problem(self.problem, error_db=self.error_db, extra_hz=self.extra_hz)
+        self.explorer = Explorer(Stock(self.compiled), self.seed, len(arrays["populations"][0]), look=False)
+        self.explorer.restore(arrays)
+        self.prover = None
+        if "proof_done" in arrays:
+            prover = self._begin_proof()
+            prover.done[:] = arrays["proof_done"]
+            prover.archive.values, prover.archive.codes = arrays["proof_values"], arrays["proof_codes"]
+
+    # Phases -----------------------------------------------------------------------------------------------------------
+
+    @property
+    def archive(self) -> Archive:
+        """The best known: the proof's once it has begun, else the explorer's."""
+        return self.explorer.archive if self.prover is None else self.prover.archive
+
+    def _begin_round(self) -> None:
+        self.compiled = compile_problem(self.problem, error_db=self.error_db, extra_hz=self.extra_hz)
+        self.explorer = Explorer(Stock(self.compiled), self.seed, self.problem.search.population)
+        self.prover = None
+
+    def _refine(self, failed: list[tuple[int, float]]) -> None:
+        """Begin the next round with the frequencies at which stacks failed; what was found so far is judged anew."""
+        known = [
+            set(self.compiled.rows.frequency_hz[self.compiled.rows.requirement == n]) for n in range(len(self.extra_hz))
+        ]
+        fresh = {(n, hz) for n, hz in failed if not any(np.isclose(hz, old, rtol=1e-9) for old in known[n])}
+        for number, frequency in sorted(fresh):
+            self.extra_hz[number].append(frequency)
+        if not fresh:
+            self.error_db /= 10.0
+        old_genes = [self.explorer.archive.codes]
+        if self.prover is not None:
+            codes = self.prover.archive.codes
+            old_genes.append(np.concatenate([codes, np.zeros_like(codes)], axis=1))
+        populations = self.explorer.populations
+        computed, epoch = self.explorer.computed, self.explorer.epoch
+        self.round += 1
+        self._begin_round()
+        self.explorer.populations = populations
+        self.explorer.computed, self.explorer.epoch = computed, epoch
+        self.explorer.take(np.concatenate(old_genes))
+        self.exploring = self.obstacle is not None  # a proof finds whatever is missing by itself
+
+    def _explore(self, watcher: Watcher, deadline: float, save: Callable[[], None]) -> None:
+        started, done_before = time.monotonic(), self.explorer.computed
+        while self.exploring and time.monotonic() < deadline:
+            begun = time.monotonic()
+            self.explorer.step()
+            self.seconds["exploring"] += time.monotonic() - begun
+            self.exploring = not self.explorer.finished
+            save()
+            rate = (self.explorer.computed - done_before) / max(time.monotonic() - started, 1e-9)
+            watcher(self._status("exploring", None, f"{rate:,.0f} stacks/s", None))
+        self.exploring = False
+
+    def _prove(self, watcher: Watcher, deadline: float, save: Callable[[], None]) -> None:
+        if self.obstacle is not None:
+            return
+        prover = self.prover or self._begin_proof()
+        started, judged_before, covered_before = time.monotonic(), prover.tally.judged, prover.covered
+
+        def watch() -> None:
+            elapsed = max(time.monotonic() - started, 1e-9)
+            gained = prover.covered - covered_before
+            left = elapsed * (1.0 - prover.covered) / gained if gained > 0.0 else None
+            rate = (prover.tally.judged - judged_before) / elapsed
+            save()
+            watcher(self._status("proving", prover.covered, f"{rate:,.0f} stacks/s", left))
+
+        try:
+            prover.run(self.workers, deadline, watch)
+        finally:
+            self.seconds["proving"] += time.monotonic() - started
+
+    def _begin_proof(self) -> Prover:
+        positions = self.compiled.rules.max_sheets
+        known = Archive(len(self.problem.search.objectives), positions)
+        known.add(self.explorer.archive.values, self.explorer.archive.codes[:, :positions])
+        self.prover = Prover(self.compiled, known, self.tally)
+        return self.prover
+
+    def _status(self, phase: str, fraction: float | None, rate: str, left: float | None) -> Status:
+        best = {}
+        if len(self.archive):
+            for column, name in enumerate(self.problem.search.objectives):
+                best[name] = _objective_text(name, int(self.archive.values[:, column].min()), self.problem.currency)
+        return Status(phase, fraction, rate, len(self.archive), best, left)
+
+    # Confirmation -----------------------------------------------------------------------------------------------------
+
+    def _confirm(self) -> _Confirmed:
+        """Judge every stack that reaches the objectives of the front on the dense grid."""
+        rows, stacks = self._candidates()
+        if not stacks:
+            nothing = np.empty(0)
+            return _Confirmed(rows, [], nothing, nothing, rows)
+        sheets = tuple(dict.fromkeys(sheet for stack in stacks for sheet in stack))
+        dense = compile_problem(self.problem, sheets, DENSITY, self.error_db / 10.0, self.extra_hz)
+        margin, row = evaluate.margins(dense, evaluate.encode(dense, stacks))
+        return _Confirmed(rows, stacks, margin, dense.rows.frequency_hz[row], dense.rows.requirement[row])
+
+    def _candidates(self) -> tuple[Integers, list[Stack]]:
+        if self.obstacle is not None:
+            stacks = self.explorer.stock.stacks(self.archive.codes)
+            return np.arange(len(stacks)), stacks
+        from stackopt.equals import equal_stacks
+
+        rows, codes = equal_stacks(self.compiled, self.archive.values)
+        return rows, evaluate.decode(self.compiled, codes)
+
+    def _failures(self, confirmed: _Confirmed) -> list[tuple[int, float]]:
+        """Worst (requirement, frequency) of every front row none of whose stacks passes."""
+        failures = []
+        for row in range(len(self.archive)):
+            here = np.flatnonzero(confirmed.rows == row)
+            best = here[np.argmax(confirmed.margin_db[here])]
+            if confirmed.margin_db[best] < -MARGIN_SLACK_DB:
+                failures.append((int(confirmed.requirement[best]), float(confirmed.frequency_hz[best])))
+        return failures
+
+    def _front(self, confirmed: _Confirmed, some_failed: bool) -> Front:
+        """Front of the confirmed stacks; of equal ones the row shows the one with the largest margin."""
+        ranked, equals = [], []
+        for number in range(len(self.archive)):
+            here = np.flatnonzero((confirmed.rows == number) & (confirmed.margin_db >= -MARGIN_SLACK_DB))
+            if len(here) == 0:
+                continue
+            best, *others = sorted(here.tolist(), key=lambda n: -round(float(confirmed.margin_db[n]), 6))
+            ranked.append(self._row(confirmed, best))
+            equals += [(len(ranked), self._row(confirmed, n)) for n in others]
+        complete = self.prover is not None and self.prover.complete and not some_failed
+        statement = self._statement(len(ranked), complete, some_failed)
+        return Front(self.problem, tuple(ranked), complete, statement, tuple(equals))
+
+    def _row(self, confirmed: _Confirmed, n: int) -> FrontRow:
+        stack = confirmed.stacks[n]
+        compiled = self.compiled.with_sheets(tuple(dict.fromkeys(stack)))
+        mass, cost, thickness = evaluate.sums(compiled, evaluate.encode(compiled, [stack]))[0]
+        priced = all(self.problem.materials[s.material].price(s.thickness_m) is not None for s in stack)
+        return FrontRow(
+            stack=stack,
+            mass_kg_per_m2=mass / MASS_UNIT,
+            cost_per_m2=cost / COST_UNIT if priced else float("nan"),
+            thickness_m=thickness / THICKNESS_UNIT,
+            margin_db=float(confirmed.margin_db[n]),
+            tightest_hz=float(confirmed.frequency_hz[n]),
+            requirement=self.problem.requirements[confirmed.requirement[n]].name,
+        )
+
+    def _statement(self, size: int, complete: bool, some_failed: bool) -> str:
+        number = count_stacks(len(self.compiled.sheets), self.compiled.rules.max_sheets)
+        if complete and size == 0:
+            return f"No stack meets the mask: proved over {number:.3g} stacks. {self._nearest()}"
+        if complete:
+            return (
+                f"Complete: all {number:.3g} stacks that the sheets can form are settled, none is missing from the front, "
+                f"and every stack of it holds on a grid {DENSITY} times denser."
+            )
+        if self.obstacle is not None:
+            settled = f"Explored, not proved: {self.obstacle}."
+        else:
+            covered = 0.0 if self.prover is None else self.prover.covered
+            settled = f"Not complete: the proof has settled {100.0 * covered:.1f} % of the stacks when time ran out."
+        if some_failed:
+            settled += " Stacks that failed on the dense grid were left out."
+        return settled if size else f"No stack found that meets the mask. {settled} {self._nearest()}"
+
+    def _nearest(self) -> str:
+        if not self.compiled.sheets:
+            return ""
+        found = scout(self.compiled)
+        if not found.stack:
+            return "The rules allow no stack."
+        where = f"requirement {found.requirement!r} at {format_frequency(found.frequency_hz)}"
+        return f"The best stack of a quick look has a margin of {found.margin_db:.1f} dB, in {where}."
+
+
+def _objective_text(name: str, value: int, currency: str) -> str:
+    if name == "mass":
+        return f"{value / MASS_UNIT:.4g} kg/m^2"
+    if name == "cost":
+        return f"{value / COST_UNIT:.4g} {currency}/m^2"
+    if name == "thickness":
+        return f"{value / THICKNESS_UNIT * 1e3:.4g} mm"
+    if name == "margin":
+        return f"{-value / evaluate.MARGIN_UNIT:.1f} dB"
+    return str(value)

@@ -54,6 +54,10 @@ class Archive:
         """
         return _covered(values, self.values)
 
+    def dominates(self, values: Integers) -> Booleans:
+        """Whether a member is no worse in every objective than each of the vectors, and better in one; see `covers`."""
+        return _strictly_covered(values, self.values)
+
     def add(self, values: Integers, codes: Integers) -> int:
         """Add feasible stacks; return how many objective vectors the archive gained.
 

@@ -1,7 +1,7 @@
 """Checkpoints of a run: plain arrays and JSON, written whole or not at all, the two newest kept.
 
-A checkpoint is one npz file (read without pickle) whose entry ``text`` holds JSON, followed in its name by a number that
-rises. A SHA-256 of the content in a file beside it tells a damaged checkpoint from a good one.
+A checkpoint is one npz file (read without pickle) whose entry ``text`` holds JSON; the number in its name rises. The
+SHA-256 of the content, appended to it, tells a damaged checkpoint from a good one.
 """
 
 from __future__ import annotations

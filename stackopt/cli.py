@@ -77,8 +77,8 @@ Outside = Annotated[
     bool, typer.Option("--allow-outside", help="Also read tables outside the folders of problem and material set.")
 ]
 Plot = Annotated[Path | None, typer.Option(metavar="FILE", help="Draw the curves (.png, .svg or .pdf).")]
-Hours = Annotated[float | None, typer.Option(metavar="H", help="Stop after so many hours; the run can go on later.")]
-Workers = Annotated[int | None, typer.Option(metavar="N", help="Worker processes; one for each processor if left out.")]
+Hours = Annotated[float | None, typer.Option(metavar="H", help="Stop after H hours; the run can go on later.")]
+Workers = Annotated[int | None, typer.Option(metavar="N", help="Processor cores for the proof; all if left out.")]
 
 
 def _show_version(wanted: bool) -> None:
@@ -100,17 +100,19 @@ def _options(
 
 @app.command()
 def check(problem: ProblemFile, allow_outside: Outside = False) -> None:
-    """Read a problem, say what was understood, and whether any stack can meet the mask.
+    """Read a problem and tell whether any stack can meet the mask.
 
-    Every mistake in the files is reported at once. Exit code 1: no stack was found that meets the mask.
+    Says what was understood; every mistake in the files is reported at once. Exit code 1: no stack was found that
+    meets the mask.
     """
-    from stackopt.compiled import compile_problem
+    from stackopt.compiled import MARGIN_SLACK_DB, compile_problem
     from stackopt.outputs.console import make_console
-    from stackopt.outputs.report import scouted_words, show_sections
+    from stackopt.outputs.report import sheets_to_look_at, show_scouted, show_sections
     from stackopt.readers import read_problem
 
     console = make_console()
-    compiled = compile_problem(read_problem(problem, allow_outside))
+    known = read_problem(problem, allow_outside)
+    compiled = compile_problem(known, sheets_to_look_at(known))
     show_sections(console, compiled)
     console.print()
     _show_cautions(console, compiled.problem)
@@ -118,8 +120,8 @@ def check(problem: ProblemFile, allow_outside: Outside = False) -> None:
     from stackopt.scout import scout
 
     scouted = scout(compiled)
-    console.print(f"{scouted_words(compiled.problem, scouted, problem)}")
-    if scouted.margin_db < 0.0:
+    show_scouted(console, compiled.problem, scouted, problem)
+    if scouted.margin_db < -MARGIN_SLACK_DB:
         raise typer.Exit(1)
 
 
@@ -128,7 +130,7 @@ def predict(
     problem: ProblemFile,
     stacks: Annotated[
         list[str],
-        typer.Argument(metavar="STACK...", help='Such as "steel 150um / copper 35um", source side first.'),
+        typer.Argument(metavar="STACK", help='Such as "steel 150um / copper 35um", source side first.'),
     ],
     csv: Annotated[Path | None, typer.Option(metavar="FILE", help="Write the table at full precision.")] = None,
     plot: Plot = None,
@@ -152,12 +154,12 @@ def predict(
     show_verdicts(console, known, predictions)
     if csv is not None:
         write_predictions(predictions, csv)
-        console.print(f"Table: {csv}")
+        console.print(f"Table: {csv}", soft_wrap=True)
     if plot is not None:
         from stackopt.outputs.plots import write_prediction_plot
 
         write_prediction_plot(known, chosen, plot)
-        console.print(f"Plot: {plot}")
+        console.print(f"Plot: {plot}", soft_wrap=True)
 
 
 @app.command()
@@ -177,9 +179,10 @@ def search(
     resume: Annotated[Path | None, typer.Option(metavar="RUN", help="Go on with an interrupted run.")] = None,
     allow_outside: Outside = False,
 ) -> None:
-    """Find the front: the stacks that meet the mask and that no other beats in every objective.
+    """Find the stacks that meet the mask and that none other beats.
 
-    Explores first, then proves that nothing is missing. Exit code 1: no stack meets the mask.
+    None other is as good in every objective and better in one. Explores first, then proves that no stack is missing,
+    and checks the result on a denser grid. Ctrl-C stops with a checkpoint. Exit code 1: no stack meets the mask.
     """
     _refuse(_wrong_hours(hours), _wrong_workers(workers), _wrong_seed(seed), *_wrong_start(problem, seed, out, resume))
     from stackopt.outputs.progress import TerminalProgress
@@ -193,7 +196,10 @@ def search(
 
 @app.command()
 def prove(run: RunFolder, hours: Hours = None, workers: Workers = None) -> None:
-    """Go on with the proof that the front of a run is complete."""
+    """Go on with the proof that the front of a run is complete.
+
+    The front is all the stacks that meet the mask and that none other beats.
+    """
     _refuse(_wrong_hours(hours), _wrong_workers(workers), _wrong_run("RUN", run))
     from stackopt.outputs.progress import TerminalProgress
     from stackopt.run import RunOptions, prove_run
@@ -210,9 +216,10 @@ def materials(
     plot: Plot = None,
     allow_outside: Outside = False,
 ) -> None:
-    """List a material set with permeability and skin depth over frequency."""
+    """List a material set: stock, prices, permeability, skin depth."""
     from stackopt.outputs.console import make_console
     from stackopt.outputs.materials import material_tables
+    from stackopt.outputs.report import show_text
     from stackopt.readers import read_material_set
 
     _refuse(_wrong_plot(plot))
@@ -220,15 +227,16 @@ def materials(
     known = read_material_set(material_set, allow_outside)
     console.print(known.title, style="bold")
     for table in material_tables(known, origins):
+        console.print()
         console.print(table)
     for remarks in known.remarks.values():
         for remark in remarks:
-            console.print(f"Remark: {remark}")
+            show_text(console, f"Remark: {remark}")
     if plot is not None:
         from stackopt.outputs.material_plots import write_material_plot
 
         write_material_plot(known, plot)
-        console.print(f"Plot: {plot}")
+        console.print(f"Plot: {plot}", soft_wrap=True)
 
 
 def _parse_stacks(texts: list[str], problem: Problem) -> list[Stack]:
@@ -249,7 +257,7 @@ def _parse_stacks(texts: list[str], problem: Problem) -> list[Stack]:
 
 def _show_result(result: RunResult) -> None:
     from stackopt.outputs.console import make_console
-    from stackopt.outputs.report import short_path
+    from stackopt.outputs.report import short_path, show_text
     from stackopt.outputs.tables import front_text
 
     console, front = make_console(), result.front
@@ -258,8 +266,12 @@ def _show_result(result: RunResult) -> None:
         _show_cautions(console, front.problem, [row.stack for row in front.rows])
         text = front_text(front, console.width, rest_in=os.path.join(folder, "front.csv"))
         console.print(text + "\n", soft_wrap=True)
-    console.print(front.statement)
-    console.print(f"Files: {folder}")
+    if front.equals:
+        count = f"{len(front.equals):,} more stacks have" if len(front.equals) > 1 else "1 more stack has"
+        show_text(console, f"{count} exactly the objectives of one of these: see front_equals.csv.")
+    show_text(console, front.statement)
+    names = ", ".join(sorted(path.name for path in result.folder.iterdir() if not path.name.startswith("checkpoint")))
+    show_text(console, f"Files in {folder}: {names}")
     if not len(front):
         raise typer.Exit(1)
 

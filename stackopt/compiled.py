@@ -1,7 +1,7 @@
 """From a Problem to read-only tables on (sheet, frequency, line): all that a search evaluates again and again.
 
-Rows are the pairs (requirement, frequency) of all requirements, one after the other; lines are the spectral lines of all rows,
- one after the other. Objectives are integers (nanograms and micro-units of currency per m^2, picometres), so that
+Rows are the pairs (requirement, frequency) of all requirements, one after the other, and lines the spectral lines of all
+rows, one after the other. Objectives are integers (nanograms and micro-units of currency per m^2, picometres), so that
 sums do not depend on the order of the sheets.
 """
 

@@ -3,11 +3,12 @@
 A *node* is a prefix; opening it looks at every stack that is one sheet longer (its children). Three cuts, all exact:
 
 rule
-    a child beyond a limit, or against a neighbour rule, is out. Limits only tighten as sheets are added, so a sheet that
-    breaks one stays out of everything below; a neighbour rule does not, so that such a sheet is tried again deeper.
+    a child beyond a limit, or against a neighbour rule, is out. Sums only grow as sheets are added, so a sheet that
+    breaks a limit stays out of everything below; a neighbour rule is another matter at another place, so that such a
+    sheet is tried again deeper.
 covered
-    a child whose sums a known feasible stack does not exceed in any objective is out, and that sheet with it below:
-    objectives never shrink as sheets are added. A feasible child becomes known and is out by the same argument. The
+    a child whose objectives a known feasible stack does not exceed is out, and that sheet with it everywhere below:
+    objectives never shrink as sheets are added. A feasible child becomes known, and is out by the same argument. The
     question goes to a `Cover`, which may answer no where the truth is yes (that costs time, not truth), never the
     other way round.
 mirror
@@ -23,6 +24,7 @@ in one row reads a few kilobytes in order.
 from __future__ import annotations
 
 import math
+from typing import Any, NamedTuple
 
 import numpy as np
 from numba import njit
@@ -32,129 +34,250 @@ from stackopt.kernel import DB, open_level
 from stackopt.lanes import close_block, multiply_block
 
 CELLS = 192
-"""Steps of a cover along each of its two stepped objectives."""
+"""Steps of a cover along each of its first two objectives."""
 UNCOVERED = np.iinfo(np.int64).max
+
+_OPEN, _OUT, _NOT_HERE = 0, 1, 2  # fates of a child: to be gone into, settled, against a rule in this place only
+
+
+class Rules(NamedTuple):
+    """What is allowed, S sheets. The three sums stand in the order of the cover's objectives, unused ones last."""
+
+    sums: Any
+    """int64 (2, S, 3), what a sheet adds: bare, and behind a bond."""
+    limits: Any
+    """int64 (3,)"""
+    used: Any
+    """int64 (3,), 1 where a sum is an objective and 0 elsewhere."""
+    thickness: int
+    """Which of the sums is the thickness."""
+    may_first: Any
+    """bool (S,)"""
+    may_last: Any
+    """bool (S,)"""
+    may_touch: Any
+    """bool (S, S), source side first."""
+    max_sheets: int
+    mirror: bool
+    """Whether mirror images may be skipped."""
+
+
+class Physics(NamedTuple):
+    """Tables of the kernel (`stackopt.kernel`), K blocks, R rows; bare sheets first, those behind a bond after them."""
+
+    table: Any
+    """float64 (S * K * SHEET,), or twice that where there is a bond."""
+    closing: Any
+    """float64 (S * K * CLOSING,), or twice that: alpha and beta, rows outermost, then sheets, then blocks."""
+    bonded: int
+    """Sheets to skip in ``table`` and ``closing`` to reach those behind a bond: S, or 0 where there is no bond."""
+    scale: Any
+    """float64 (2, S, R)"""
+    row_block: Any
+    """int64 (R + 1,)"""
+    start: Any
+    """float64 (K * STATE,)"""
+    fixed_scale: Any
+    """float64 (R,)"""
+    coefficients: Any
+    """float64 (R, C), Chebyshev coefficients of the unshielded level, dB."""
+    highest: Any
+    """float64 (R,), upper bound of the unshielded level, dB."""
+    reach: Any
+    """float64 (R,), scale of the stack thickness, m."""
+    thickest: float
+    """Where the unshielded level's range ends, m."""
+    required: Any
+    """float64 (R,), dB."""
+
+
+class Cover(NamedTuple):
+    """Known feasible stacks: the least third objective up to each step of the first two, for each number of sheets."""
+
+    least: Any
+    """int64 (levels, CELLS, CELLS); one level where the number of sheets is no objective."""
+    shift: Any
+    """int64 (2,), a step being 2**shift."""
+
+
+# The helpers are inlined and take plain arrays: passing the tuples on, or choosing between two arrays, would count
+# references in every step, which costs more than the arithmetic and stalls threads that share the tables.
 
 
 @njit(cache=True, nogil=True, inline="always")
-def is_covered(cover, step, a, b, c, sheets):  # type: ignore[no-untyped-def]
-    """Whether a known stack is no worse; certain if true. ``cover`` (levels, CELLS, CELLS) holds the least c."""
-    level = min(sheets, cover.shape[0] - 1)
-    i = min(a // step[0], CELLS - 1)
-    j = min(b // step[1], CELLS - 1)
-    return cover[level, i, j] <= c
+def _is_covered(least, shift, used, a, b, c, sheets):  # type: ignore[no-untyped-def]
+    level = min(sheets, least.shape[0] - 1)
+    i = min((a * used[0]) >> shift[0], CELLS - 1)
+    j = min((b * used[1]) >> shift[1], CELLS - 1)
+    return least[level, i, j] <= c * used[2]
 
 
 @njit(cache=True, nogil=True)
-def add_to_cover(cover, step, a, b, c, sheets):  # type: ignore[no-untyped-def]
-    """Enter a known stack in a cover."""
-    level = sheets if cover.shape[0] > 1 else 0
-    for n in range(level, cover.shape[0]):
-        for i in range(-(-a // step[0]), CELLS):
-            for j in range(-(-b // step[1]), CELLS):
-                if c < cover[n, i, j]:
-                    cover[n, i, j] = c
+def _add_to_cover(least, shift, used, a, b, c, sheets):  # type: ignore[no-untyped-def]
+    lowest = sheets if least.shape[0] > 1 else 0
+    # A cell stands for its lower corner, so that a stack counts from the cell above its own.
+    for level in range(lowest, least.shape[0]):
+        for i in range((a * used[0] + (1 << shift[0]) - 1) >> shift[0], CELLS):
+            for j in range((b * used[1] + (1 << shift[1]) - 1) >> shift[1], CELLS):
+                least[level, i, j] = min(least[level, i, j], c * used[2])
 
 
 @njit(cache=True, nogil=True, inline="always")
-def _row_state(depth, row, path, state, scale, valid, first, following, first_scale, following_scale, row_block):  # type: ignore[no-untyped-def]
-    """Bring the row vectors of a row up to the prefix of the given depth; ``state`` is flat, (depth, K * STATE)."""
+def _add_sheet(sums, path, totals, valid, depth, sheet):  # type: ignore[no-untyped-def]
+    path[depth] = sheet
+    for axis in range(3):
+        totals[depth + 1, axis] = totals[depth, axis] + sums[min(depth, 1), sheet, axis]
+    for row in range(valid.shape[1]):
+        valid[depth + 1, row] = 0
+
+
+@njit(cache=True, nogil=True, inline="always")
+def _choose_children(  # type: ignore[no-untyped-def]
+    sums, limits, used, may_first, may_last, may_touch, mirror, least, shift,
+    path, totals, usable, usable_count, alive, fate, depth,
+):  # fmt: skip
+    """Drop the sheets that no stack below may use, and list the children to be judged in ``alive``; return how many."""
+    bonded = min(depth, 1)
+    kept = 0
+    judged = 0
+    for n in range(usable_count[depth]):
+        s = usable[depth, n]
+        a = totals[depth, 0] + sums[bonded, s, 0]
+        b = totals[depth, 1] + sums[bonded, s, 1]
+        c = totals[depth, 2] + sums[bonded, s, 2]
+        if a > limits[0] or b > limits[1] or c > limits[2]:
+            continue
+        if _is_covered(least, shift, used, a, b, c, depth + 1):
+            continue
+        usable[depth, kept] = s
+        kept += 1
+        here = may_first[s] if depth == 0 else may_touch[path[depth - 1], s]
+        fate[s] = _OPEN if here else _NOT_HERE
+        if here and may_last[s] and not (mirror and depth > 0 and s < path[0]):
+            alive[judged] = s
+            judged += 1
+    usable_count[depth] = kept
+    return judged
+
+
+@njit(cache=True, nogil=True, inline="always")
+def _bring_up(table, bonded, scale, row_block, path, state, scales, valid, depth, row):  # type: ignore[no-untyped-def]
+    """Compute the row vectors of a row up to the prefix of the given depth."""
     blocks = row_block[-1]
-    begin, end = row_block[row], row_block[row + 1]
     have = depth
     while valid[have, row] == 0:
         have -= 1
-    for d in range(have + 1, depth + 1):
-        sheet = path[d - 1]
-        old, new = (d - 1) * blocks, d * blocks
-        at = sheet * blocks
-        if d == 1:
-            for block in range(begin, end):
-                multiply_block(first, (at + block) * SHEET, state, (old + block) * STATE, state, (new + block) * STATE)
-            scale[d, row] = scale[d - 1, row] + first_scale[sheet, row]
-        else:
-            for block in range(begin, end):
-                multiply_block(
-                    following, (at + block) * SHEET, state, (old + block) * STATE, state, (new + block) * STATE
-                )
-            scale[d, row] = scale[d - 1, row] + following_scale[sheet, row]
-        valid[d, row] = 1
+    for d in range(have, depth):
+        sheet = path[d] + (bonded if d > 0 else 0)
+        for block in range(row_block[row], row_block[row + 1]):
+            old, new = (d * blocks + block) * STATE, ((d + 1) * blocks + block) * STATE
+            multiply_block(table, (sheet * blocks + block) * SHEET, state, old, state, new)
+        scales[d + 1, row] = scales[d, row] + scale[min(d, 1), path[d], row]
+        valid[d + 1, row] = 1
+
+
+@njit(cache=True, nogil=True, inline="always")
+def _judge_row(  # type: ignore[no-untyped-def]
+    sums, thickness_axis, closing, bonded, scale, row_block, coefficients, highest, reach, thickest, required,
+    totals, state, scales, alive, total, depth, row, judged,
+):  # fmt: skip
+    """Keep those children in ``alive`` that meet the mask in a row; return how many."""
+    sheets, blocks = sums.shape[1], row_block[-1]
+    begin, width = row_block[row], row_block[row + 1] - row_block[row]
+    needed = required[row] - DB * scales[depth, row]
+    at_state = (depth * blocks + begin) * STATE
+    at_row = ((bonded * blocks if depth > 0 else 0) + begin * sheets) * CLOSING
+    surviving = 0
+    for n in range(judged):
+        s = alive[n]
+        for i in range(TOTAL):
+            total[i] = 0.0
+        at = at_row + s * width * CLOSING
+        for block in range(width):
+            close_block(closing, at + block * CLOSING, state, at_state + block * STATE, total)
+        re = 0.0
+        im = 0.0
+        for lane in range(LANES):
+            re += total[lane]
+            im += total[LANES + lane]
+        level = DB * scale[min(depth, 1), s, row] - 0.5 * DB * math.log(re * re + im * im)
+        if level + highest[row] < needed:
+            continue  # fails at any thickness
+        thickness = (totals[depth, thickness_axis] + sums[min(depth, 1), s, thickness_axis]) * 1e-12
+        x = 2.0 * math.log1p(thickness / reach[row]) / math.log1p(thickest / reach[row]) - 1.0
+        if level + open_level(coefficients, row, x) < needed:
+            continue
+        alive[surviving] = s
+        surviving += 1
+    return surviving
+
+
+@njit(cache=True, nogil=True, inline="always")
+def _list_branches(usable, usable_count, branch, branch_count, fate, depth):  # type: ignore[no-untyped-def]
+    """List the children to go into, and drop the settled ones from what may be used below."""
+    kept = 0
+    branches = 0
+    for n in range(usable_count[depth]):
+        s = usable[depth, n]
+        if fate[s] == _OUT:
+            continue
+        usable[depth, kept] = s
+        kept += 1
+        if fate[s] == _OPEN:
+            branch[depth, branches] = s
+            branches += 1
+    usable_count[depth] = kept
+    branch_count[depth] = branches
+
+
+@njit(cache=True, nogil=True, inline="always")
+def _next_node(  # type: ignore[no-untyped-def]
+    sums, used, least, shift, path, totals, valid, usable, usable_count, branch, branch_count, depth, base
+):
+    """Go to the next node to be opened; return its depth, or -1 when everything below the base is done."""
+    while depth >= base:
+        if branch_count[depth] == 0:
+            depth -= 1
+            continue
+        branch_count[depth] -= 1
+        _add_sheet(sums, path, totals, valid, depth, branch[depth, branch_count[depth]])
+        a, b, c = totals[depth + 1, 0], totals[depth + 1, 1], totals[depth + 1, 2]
+        if _is_covered(least, shift, used, a, b, c, depth + 1):
+            continue  # by a stack found since
+        for n in range(usable_count[depth]):
+            usable[depth + 1, n] = usable[depth, n]
+        usable_count[depth + 1] = usable_count[depth]
+        break
+    return depth + 1 if depth >= base else -1
 
 
 @njit(cache=True, nogil=True)
-def descend(  # type: ignore[no-untyped-def]
-    prefix,
-    recurse,
-    stop,
-    # the problem
-    sums_first,
-    sums_following,
-    limits,
-    may_first,
-    may_last,
-    may_touch,
-    max_sheets,
-    axes,
-    mirror,
-    # the physics
-    first,
-    following,
-    first_scale,
-    following_scale,
-    closing_first,
-    closing_following,
-    row_block,
-    start,
-    fixed_scale,
-    coefficients,
-    highest,
-    reach,
-    thickest,
-    required,
-    # what is known
-    cover,
-    step,
-    keep_all,
-    room,
-    # what is learnt
-    row_order,
-    counters,
-):
+def _longer(found, count):  # type: ignore[no-untyped-def]
+    longer = np.empty((2 * count, found.shape[1]), np.int64)
+    longer[:count] = found
+    return longer
+
+
+@njit(cache=True, nogil=True)
+def descend(prefix, recurse, stop, rules, physics, cover, keep_all, room, row_order, counters):  # type: ignore[no-untyped-def]
     """Open a prefix and, if asked to, everything below it.
 
     Parameters
     ----------
     prefix : int64 (depth,)
-        Sheet numbers from 0; the prefix itself is known to be neither covered nor feasible.
+        Sheet numbers from 0; the prefix itself is settled.
     recurse : bool
         Whether to go on below the children.
     stop : uint8 (1,)
         Set by another thread to make this one return at once, unfinished.
-    sums_first, sums_following : int64 (S, 3)
-        What a sheet adds to mass, cost and thickness, bare and behind a bond.
-    limits : int64 (3,)
-    may_first, may_last : bool (S,)
-    may_touch : bool (S, S)
-    axes : int64 (3,)
-        Which of the sums are the cover's a, b and c; -1 for none.
-    mirror : bool
-        Whether mirror images may be skipped.
-    first ... coefficients
-        See `stackopt.kernel`.
-    closing_first, closing_following : float64
-        alpha and beta of every sheet, rows outermost, then sheets, then blocks.
-    highest, reach, required : float64 (R,)
-        Upper bound of the unshielded level, dB; scale of the stack thickness, m; required attenuation, dB.
-    thickest : float
-        Thickness at which the unshielded level's range ends, m.
-    cover, step : int64 (levels, CELLS, CELLS), int64 (2,)
-        Known stacks; grows as stacks are found, unless ``keep_all``.
+    rules, physics, cover
+        The cover grows as stacks are found, unless ``keep_all``.
     keep_all : bool
         Collect every feasible stack that is not covered, and go on below it too.
     room : int
-        Largest number of stacks to collect before returning unfinished.
+        Largest number of stacks to collect; one more ends the descent, unfinished.
     row_order : int64 (R,)
-        Order in which rows are tried; adapted in place.
+        Order in which rows are tried; rows that reject move forward in it.
     counters : int64 (2,)
         Prefixes opened and children judged; added to.
 
@@ -164,183 +287,78 @@ def descend(  # type: ignore[no-untyped-def]
         Codes (sheet number + 1) of the feasible stacks met.
     finished : bool
     """
-    sheets = sums_first.shape[0]
-    rows = row_block.size - 1
-    blocks = row_block[rows]
-    base = prefix.size
-    path = np.zeros(max_sheets + 1, np.int64)
-    totals = np.zeros((max_sheets + 1, 3), np.int64)
-    state = np.empty((max_sheets + 1) * blocks * STATE)
-    scale = np.zeros((max_sheets + 1, rows))
-    valid = np.zeros((max_sheets + 1, rows), np.uint8)
-    # Sheets that may still be added at or below a depth, and those still to be descended into.
-    usable = np.empty((max_sheets + 1, sheets), np.int64)
-    usable_count = np.zeros(max_sheets + 1, np.int64)
-    branch = np.empty((max_sheets + 1, sheets), np.int64)
-    branch_count = np.zeros(max_sheets + 1, np.int64)
+    sums, limits, used, thickness_axis, may_first, may_last, may_touch, max_sheets, mirror = rules
+    table, closing, bonded, scale, row_block, start, fixed_scale = physics[:7]
+    coefficients, highest, reach, thickest, required = physics[7:]
+    least, shift = cover
+    sheets, rows, deepest = sums.shape[1], required.size, max_sheets + 1
+    # The prefix being looked at, by depth.
+    path = np.zeros(deepest, np.int64)
+    totals = np.zeros((deepest, 3), np.int64)
+    state = np.empty(deepest * start.size)
+    scales = np.zeros((deepest, rows))
+    valid = np.zeros((deepest, rows), np.uint8)
+    usable = np.empty((deepest, sheets), np.int64)
+    usable_count = np.zeros(deepest, np.int64)
+    branch = np.empty((deepest, sheets), np.int64)
+    branch_count = np.zeros(deepest, np.int64)
+    # Scratch of the node being opened.
     alive = np.empty(sheets, np.int64)
-    dead = np.empty(sheets, np.uint8)
+    fate = np.zeros(sheets, np.uint8)
     total = np.empty(TOTAL)
     found = np.empty((64, max_sheets), np.int64)
-    found_count = 0
+    count = 0
 
-    state[: blocks * STATE] = start
-    scale[0] = fixed_scale
+    state[: start.size] = start
+    scales[0] = fixed_scale
     valid[0] = 1
+    depth = base = prefix.size
     for d in range(base):
-        path[d] = prefix[d]
-        for axis in range(3):
-            added = sums_first[prefix[d], axis] if d == 0 else sums_following[prefix[d], axis]
-            totals[d + 1, axis] = totals[d, axis] + added
-    depth = base
-    for s in range(sheets):
-        usable[depth, s] = s
-    usable_count[depth] = sheets
-    opening = True
-    while True:
-        if opening:
-            opening = False
-            if stop[0] != 0:
-                return found[:found_count], False
-            counters[0] += 1
-            added = sums_first if depth == 0 else sums_following
-            last_level = depth + 1 == max_sheets
-            # Candidates: sheets that no limit and no known stack rule out here.
-            kept = 0
-            judged = 0
-            for n in range(usable_count[depth]):
-                s = usable[depth, n]
-                mass = totals[depth, 0] + added[s, 0]
-                cost = totals[depth, 1] + added[s, 1]
-                thickness = totals[depth, 2] + added[s, 2]
-                if mass > limits[0] or cost > limits[1] or thickness > limits[2]:
-                    continue
-                a = 0
-                b = 0
-                c = 0
-                if axes[0] >= 0:
-                    a = totals[depth, axes[0]] + added[s, axes[0]]
-                if axes[1] >= 0:
-                    b = totals[depth, axes[1]] + added[s, axes[1]]
-                if axes[2] >= 0:
-                    c = totals[depth, axes[2]] + added[s, axes[2]]
-                if is_covered(cover, step, a, b, c, depth + 1):
-                    continue
-                usable[depth, kept] = s
-                kept += 1
-                dead[s] = 0
-                here = may_first[s] if depth == 0 else may_touch[path[depth - 1], s]
-                if not here:
-                    dead[s] = 2
-                elif may_last[s] and not (mirror and depth > 0 and s < path[0]):
-                    alive[judged] = s
-                    judged += 1
-            usable_count[depth] = kept
-            counters[1] += judged
-            # Judge them row by row; most fall in the first row tried.
-            closing = closing_first if depth == 0 else closing_following
-            added_scale = first_scale if depth == 0 else following_scale
-            for position in range(rows):
-                if judged == 0:
-                    break
-                row = row_order[position]
-                _row_state(
-                    depth, row, path, state, scale, valid,
-                    first, following, first_scale, following_scale, row_block,
-                )  # fmt: skip
-                begin, end = row_block[row], row_block[row + 1]
-                width = end - begin
-                at_state = (depth * blocks + begin) * STATE
-                at_row = begin * sheets * CLOSING
-                span = math.log1p(thickest / reach[row])
-                surviving = 0
-                for n in range(judged):
-                    s = alive[n]
-                    for i in range(TOTAL):
-                        total[i] = 0.0
-                    at = at_row + s * width * CLOSING
-                    for block in range(width):
-                        close_block(closing, at + block * CLOSING, state, at_state + block * STATE, total)
-                    re = 0.0
-                    im = 0.0
-                    for lane in range(LANES):
-                        re += total[lane]
-                        im += total[LANES + lane]
-                    level = DB * (scale[depth, row] + added_scale[s, row]) - 0.5 * DB * math.log(re * re + im * im)
-                    if level + highest[row] < required[row]:
-                        continue  # fails at any thickness
-                    thickness = (totals[depth, 2] + added[s, 2]) * 1e-12
-                    x = 2.0 * math.log1p(thickness / reach[row]) / span - 1.0
-                    if level + open_level(coefficients, row, x) < required[row]:
-                        continue
-                    alive[surviving] = s
-                    surviving += 1
-                if surviving < judged and position > 0:
-                    row_order[position] = row_order[position - 1]
-                    row_order[position - 1] = row
-                judged = surviving
-            # What is left is feasible.
-            for n in range(judged):
-                s = alive[n]
-                if not keep_all:
-                    dead[s] = 1
-                a = 0
-                b = 0
-                c = 0
-                if axes[0] >= 0:
-                    a = totals[depth, axes[0]] + added[s, axes[0]]
-                if axes[1] >= 0:
-                    b = totals[depth, axes[1]] + added[s, axes[1]]
-                if axes[2] >= 0:
-                    c = totals[depth, axes[2]] + added[s, axes[2]]
-                if not keep_all:
-                    if is_covered(cover, step, a, b, c, depth + 1):
-                        continue
-                    add_to_cover(cover, step, a, b, c, depth + 1)
-                if found_count == room:
-                    return found[:found_count], False
-                if found_count == found.shape[0]:
-                    larger = np.empty((2 * found_count, max_sheets), np.int64)
-                    larger[:found_count] = found
-                    found = larger
-                for d in range(max_sheets):
-                    found[found_count, d] = path[d] + 1 if d < depth else 0
-                found[found_count, depth] = s + 1
-                found_count += 1
-            branch_count[depth] = 0
-            if recurse and not last_level:
-                usable_kept = 0
-                for n in range(usable_count[depth]):
-                    s = usable[depth, n]
-                    if dead[s] == 1:
-                        continue
-                    usable[depth, usable_kept] = s
-                    usable_kept += 1
-                    if dead[s] == 0:
-                        branch[depth, branch_count[depth]] = s
-                        branch_count[depth] += 1
-                usable_count[depth] = usable_kept
-        # Go to the next child, or back up.
-        if branch_count[depth] == 0:
-            if depth == base:
+        _add_sheet(sums, path, totals, valid, d, prefix[d])
+    usable[base] = np.arange(sheets)
+    usable_count[base] = sheets
+    while depth >= 0:
+        if stop[0] != 0:
+            return found[:count], False
+        judged = _choose_children(
+            sums, limits, used, may_first, may_last, may_touch, mirror, least, shift,
+            path, totals, usable, usable_count, alive, fate, depth,
+        )  # fmt: skip
+        counters[0] += 1
+        counters[1] += judged
+        for position in range(rows):
+            if judged == 0:
                 break
-            depth -= 1
-            continue
-        branch_count[depth] -= 1
-        s = branch[depth, branch_count[depth]]
-        added = sums_first if depth == 0 else sums_following
-        for axis in range(3):
-            totals[depth + 1, axis] = totals[depth, axis] + added[s, axis]
-        path[depth] = s
-        a = totals[depth + 1, axes[0]] if axes[0] >= 0 else 0
-        b = totals[depth + 1, axes[1]] if axes[1] >= 0 else 0
-        c = totals[depth + 1, axes[2]] if axes[2] >= 0 else 0
-        if is_covered(cover, step, a, b, c, depth + 1):
-            continue  # a stack found since covers it
-        for n in range(usable_count[depth]):
-            usable[depth + 1, n] = usable[depth, n]
-        usable_count[depth + 1] = usable_count[depth]
-        depth += 1
-        valid[depth] = 0
-        opening = True
-    return found[:found_count], True
+            row = row_order[position]
+            _bring_up(table, bonded, scale, row_block, path, state, scales, valid, depth, row)
+            surviving = _judge_row(
+                sums, thickness_axis, closing, bonded, scale, row_block, coefficients, highest, reach, thickest,
+                required, totals, state, scales, alive, total, depth, row, judged,
+            )  # fmt: skip
+            if surviving < judged and position > 0:
+                row_order[position] = row_order[position - 1]
+                row_order[position - 1] = row
+            judged = surviving
+        for n in range(judged):  # the feasible ones
+            s = alive[n]
+            if not keep_all:
+                fate[s] = _OUT
+                a = totals[depth, 0] + sums[min(depth, 1), s, 0]
+                b = totals[depth, 1] + sums[min(depth, 1), s, 1]
+                c = totals[depth, 2] + sums[min(depth, 1), s, 2]
+                _add_to_cover(least, shift, used, a, b, c, depth + 1)
+            if count == room:
+                return found[:count], False
+            if count == found.shape[0]:
+                found = _longer(found, count)
+            for d in range(max_sheets):
+                found[count, d] = path[d] + 1 if d < depth else 0
+            found[count, depth] = s + 1
+            count += 1
+        branch_count[depth] = 0
+        if recurse and depth + 1 < max_sheets:
+            _list_branches(usable, usable_count, branch, branch_count, fate, depth)
+        depth = _next_node(
+            sums, used, least, shift, path, totals, valid, usable, usable_count, branch, branch_count, depth, base
+        )
+    return found[:count], True

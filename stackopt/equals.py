@@ -1,7 +1,7 @@
 """All stacks that reach exactly the objectives of a front's rows: other orders, and other sheets with the same sums.
 
-Sums do not depend on the order of the sheets, so the search runs over multisets of sheets; every order of a multiset that
-matches is then judged.
+Sums do not depend on the order of the sheets, so the search runs over multisets of sheets; every order of a multiset
+that matches is then judged.
 """
 
 from __future__ import annotations

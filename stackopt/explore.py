@@ -30,8 +30,12 @@ Integers = NDArray[np.int64]
 ISLANDS = 4
 GENERATIONS = 12
 """Generations of an epoch."""
-QUIET_EPOCHS = 3
+QUIET_EPOCHS = 2
 """Exploring ends after so many epochs without a new member."""
+
+
+MOST_PAIRS = 40_000
+"""Moves of two positions tried from a stack."""
 
 
 class StackProblem(PymooProblem):  # type: ignore[misc]
@@ -59,7 +63,7 @@ class StackProblem(PymooProblem):  # type: ignore[misc]
 
 def record(stock: Stock, archive: Archive, genes: Integers) -> Judged:
     """Judge genes and add the feasible ones to the archive."""
-    judged = stock.judge(genes, archive.covers)
+    judged = stock.judge(genes, archive.dominates)
     archive.add(judged.values[judged.feasible], genes[judged.feasible])
     return judged
 
@@ -198,9 +202,13 @@ def run_island(task: IslandTask) -> IslandResult:
     algorithm.setup(problem, termination=NoTermination(), seed=seed, verbose=False)
     for _ in range(GENERATIONS):
         candidates = algorithm.ask()
+        if candidates is None:
+            break  # a problem so small that every stack has been seen
         algorithm.evaluator.eval(problem, candidates)
         algorithm.tell(infills=candidates)
-    return IslandResult(algorithm.pop.get("X").astype(np.int64), archive, problem.computed)
+    # Equal stacks were dropped; the size of a population stays.
+    population = np.resize(algorithm.pop.get("X").astype(np.int64), task.population.shape)
+    return IslandResult(population, archive, problem.computed)
 
 
 Mapper = Callable[[Callable[[IslandTask], IslandResult], Iterable[IslandTask]], Iterable[IslandResult]]
@@ -228,6 +236,7 @@ class Explorer:
         self.epoch = 0
         self.quiet = 0
         self._polished: set[bytes] = set()
+        self._polished_pairs: set[bytes] = set()
         random = np.random.default_rng((seed, 0))
         self.populations = [random_genes(stock, population, random) for _ in range(ISLANDS)]
         if look:
@@ -254,14 +263,15 @@ class Explorer:
         self.quiet = self.quiet + 1 if np.array_equal(before, self.archive.values) else 0
 
     def polish(self) -> None:
-        """Try every local move of every archive member, until none of them brings a new member."""
-        while True:
-            fresh = [genes for genes in self.archive.codes if genes.tobytes() not in self._polished]
-            if not fresh:
-                return
-            for genes in fresh:
-                self._polished.add(genes.tobytes())
-                self.computed += record(self.stock, self.archive, neighbours(self.stock, genes)).computed
+        """Try every local move of every archive member, then moves of two positions at once, until nothing improves."""
+        for moves, tried in ((neighbours, self._polished), (self._pairs, self._polished_pairs)):
+            while fresh := [genes for genes in self.archive.codes if genes.tobytes() not in tried]:
+                for genes in fresh:
+                    tried.add(genes.tobytes())
+                    self.computed += record(self.stock, self.archive, moves(self.stock, genes)).computed
+
+    def _pairs(self, stock: Stock, genes: Integers) -> Integers:
+        return pair_neighbours(stock, genes, np.random.default_rng((self.seed, *genes.tolist())))
 
     def take(self, genes: Integers) -> None:
         """Judge stacks known from elsewhere, keep the feasible ones, and polish them."""
@@ -283,6 +293,7 @@ class Explorer:
         self.populations = list(state["populations"])
         self.seed, self.epoch, self.quiet, self.computed = (int(value) for value in state["counters"])
         self._polished = {genes.tobytes() for genes in self.archive.codes}
+        self._polished_pairs = set(self._polished)
 
     def _migrated(self, island: int) -> Integers:
         """Population of an island, a tenth of it replaced by members of the archive."""
@@ -350,11 +361,28 @@ def neighbours(stock: Stock, genes: Integers) -> Integers:
     return np.unique(stock.tidy(np.concatenate(padded)), axis=0)
 
 
+def pair_neighbours(stock: Stock, genes: Integers, random: np.random.Generator) -> Integers:
+    """Stacks that differ in two positions, empty ones included; `MOST_PAIRS` of them at random if there are more."""
+    m, choices = stock.positions, stock.choices + 1
+    places = np.array([(i, j) for i in range(m) for j in range(i + 1, m)], dtype=np.int64).reshape(-1, 2)
+    total = len(places) * choices * choices
+    picked = np.arange(total) if total <= MOST_PAIRS else random.choice(total, MOST_PAIRS, replace=False)
+    place, one, other = np.unravel_index(picked, (len(places), choices, choices))
+    found = np.repeat(genes[None], len(picked), axis=0)
+    row = np.arange(len(picked))
+    thicknesses = _typical_thickness(stock, genes)
+    for side, code in ((0, one), (1, other)):
+        at = places[place, side]
+        found[row, at] = code
+        found[row, m + at] = thicknesses[code]
+    return stock.tidy(found)
+
+
 _STEPS = np.array([0.5, 0.7, 0.85, 0.93, 0.97, 0.99, 0.998, 1.002, 1.01, 1.03, 1.07, 1.15])
 
 
 def _typical_thickness(stock: Stock, genes: Integers) -> Integers:
-    """For each code from 0, the thickness to try it with: that of the stack's free sheets, or the middle of the range."""
+    """Thickness to try each code from 0 with: that of the stack's free sheets, or the middle of the range."""
     own = genes[stock.positions :]
     middle = np.sqrt(stock.ranges_pm[:, 0].astype(float) * stock.ranges_pm[:, 1]).astype(np.int64)
     typical = int(np.median(own[own > 0])) if np.any(own > 0) else 0

@@ -64,7 +64,7 @@ def choose_rule(
     if not isinstance(field, CoaxialLoops | CoaxialDipoles):
         return fields.REFERENCE_RULE, 0.0
     few = grid_hz[np.unique(np.linspace(0, len(grid_hz) - 1, 12).astype(int))]
-    trials = [media(problem, stack, few) for stack in _trial_stacks(problem, sheets)]
+    trials = [media(problem, stack, few) for stack in _trial_stacks(problem, sheets, few[:1])]
     rules = problem.rules
     return fields.choose_rule(
         lambda rule: spectral_lines(field, few, rule),
@@ -75,15 +75,22 @@ def choose_rule(
     )
 
 
-def _trial_stacks(problem: Problem, sheets: Stack) -> list[Stack]:
-    """Thinnest and thickest sheet of each material, and a few mixed stacks: what a quadrature is judged by."""
+def _trial_stacks(problem: Problem, sheets: Stack, lowest_hz: Real) -> list[Stack]:
+    """Return what a quadrature is judged by: single sheets, mixed stacks, and the hardest ones.
+
+    Hardest are strongly permeable sheets kept apart by other ones: together they let nothing but the smallest
+    wavenumbers pass, orders of magnitude below the reciprocal of the gaps.
+    """
     by_material: dict[str, list[Sheet]] = {}
     for sheet in sheets:
         by_material.setdefault(sheet.material, []).append(sheet)
     ends = [sheet for same in by_material.values() for sheet in dict.fromkeys((same[0], same[-1]))]
+    mu = {name: float(np.abs(problem.materials[name].permeability(lowest_hz)[0])) for name in by_material}
+    strongest = max(sheets, key=lambda sheet: mu[sheet.material] * sheet.thickness_m)
+    count = problem.rules.max_sheets
+    apart = [tuple((strongest, same[-1])[n % 2] for n in range(count)) for same in by_material.values()]
     random = np.random.default_rng(0)
     mixed = [
-        with_bonds(problem, tuple(sheets[i] for i in random.integers(len(sheets), size=problem.rules.max_sheets)))
-        for _ in range(6)
+        tuple(sheets[i] for i in random.integers(len(sheets), size=random.integers(1, count + 1))) for _ in range(24)
     ]
-    return [(sheet,) for sheet in ends] + mixed
+    return [with_bonds(problem, stack) for stack in apart + mixed + [(sheet,) for sheet in ends]]

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stackopt import evaluate
-from stackopt.compiled import COST_UNIT, MASS_UNIT, THICKNESS_UNIT, compile_problem, sheet_sums
+from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_UNIT, compile_problem, sheet_sums
 from stackopt.front import FrontRow
 from stackopt.model import with_bonds
 from stackopt.problem import Problem, Sheet, Stack
@@ -59,8 +59,8 @@ class Prediction:
 
     @property
     def meets_mask(self) -> bool:
-        """Whether no margin is negative."""
-        return self.row.margin_db >= 0.0
+        """Whether no margin is negative; rounding does not decide."""
+        return self.row.margin_db >= -MARGIN_SLACK_DB
 
 
 def predict(problem: Problem, stacks: Sequence[Stack], density: int = 1) -> tuple[Prediction, ...]:

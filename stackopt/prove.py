@@ -14,6 +14,8 @@ import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from dataclasses import dataclass
+from itertools import pairwise
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
@@ -24,11 +26,16 @@ from stackopt.blocks import CLOSING, LANES, SHEET
 from stackopt.compiled import MARGIN_SLACK_DB, CompiledProblem
 from stackopt.problem import PROVABLE_OBJECTIVES, Problem
 
+if TYPE_CHECKING:
+    from stackopt import descent
+
 Real = NDArray[np.float64]
 Integers = NDArray[np.int64]
 Booleans = NDArray[np.bool_]
 
 ROOM = 1 << 62
+PREFIX = 2
+"""Sheets in the prefix of a share below which everything is searched."""
 _SUMS = {"mass": 0, "cost": 1, "thickness": 2}
 
 
@@ -82,9 +89,10 @@ class Prover:
     def __init__(self, compiled: CompiledProblem, archive: Archive, tally: Tally | None = None) -> None:
         self.compiled, self.archive = compiled, archive
         self.tally = Tally() if tally is None else tally
-        self.tables = _Tables(compiled)
+        self.tables = Tables(compiled)
         self.shares = list(_shares(len(compiled.sheets), compiled.rules.max_sheets))
         self.done = np.zeros(len(self.shares), dtype=bool)
+        self._covered: tuple[Integers | None, descent.Cover | None] = (None, None)
 
     @property
     def complete(self) -> bool:
@@ -106,7 +114,7 @@ class Prover:
         """
         started = time.monotonic()
         try:
-            for depth in (0, 1, 2):
+            for depth in range(PREFIX + 1):
                 waiting = [n for n, prefix in enumerate(self.shares) if len(prefix) == depth and not self.done[n]]
                 self._run_shares(waiting, workers, deadline, watch, every_s)
         finally:
@@ -151,7 +159,7 @@ class Prover:
         if not prefix:
             return False
         rules = self.compiled.rules
-        if not rules.first[prefix[0]] or (len(prefix) == 2 and not rules.neighbours[prefix]):
+        if not rules.first[prefix[0]] or (len(prefix) == PREFIX and not rules.neighbours[prefix]):
             return True
         codes = np.zeros((1, rules.max_sheets), dtype=np.int64)
         codes[0, : len(prefix)] = np.array(prefix) + 1
@@ -160,11 +168,19 @@ class Prover:
         return bool(np.any(totals > rules.limits) or self.archive.covers(values)[0])
 
     def _descend(self, number: int, stop: NDArray[np.uint8]) -> _Outcome:
-        prefix = np.array(self.shares[number], dtype=np.int64)
-        cover, step = self.tables.cover(self.archive.values)
+        cover = self._cover()
         counters = np.zeros(2, dtype=np.int64)
-        found, finished = self.tables.descend(prefix, len(prefix) == 2, stop, cover, step, False, ROOM, counters)
+        found, finished = self.tables.descend(self.shares[number], stop, cover, counters)
         return _Outcome(found, finished, counters)
+
+    def _cover(self) -> descent.Cover:
+        """Copy of the archive's cover, made anew only when the archive has changed."""
+        values, cover = self._covered
+        if values is not self.archive.values or cover is None:
+            values = self.archive.values
+            cover = self.tables.cover(values)
+            self._covered = values, cover
+        return cover._replace(least=cover.least.copy())
 
     def _merge(self, number: int, outcome: _Outcome) -> None:
         if len(outcome.found):
@@ -191,70 +207,106 @@ def _shares(sheets: int, max_sheets: int) -> Iterator[tuple[int, ...]]:
         yield from ((s, t) for s in range(sheets) for t in range(sheets))
 
 
-class _Tables:
+class Tables:
     """Read-only tables of the descent, one row order per thread, and the covers it starts from."""
 
     def __init__(self, compiled: CompiledProblem) -> None:
+        from stackopt import descent  # compiled code is loaded only where it is used
+
         self.compiled = compiled
-        problem, rows, rules = compiled.problem, compiled.rows, compiled.rules
-        self.closing_first = _closing(compiled, compiled.tables.first)
-        shared = compiled.tables.following is compiled.tables.first
-        self.closing_following = self.closing_first if shared else _closing(compiled, compiled.tables.following)
-        axes = [_SUMS[name] for name in problem.search.objectives if name in _SUMS]
-        self.axes = np.array((axes + [-1, -1, -1])[:3], dtype=np.int64)
-        self.levels = rules.max_sheets + 1 if "sheets" in problem.search.objectives else 1
         self.mirror = mirror_holds(compiled)
+        names = compiled.problem.search.objectives
+        self.levels = compiled.rules.max_sheets + 1 if "sheets" in names else 1
+        used = [_SUMS[name] for name in names if name in _SUMS]
+        self.order = used + [axis for axis in range(3) if axis not in used]
+        self.used = np.array([1] * len(used) + [0] * (3 - len(used)), dtype=np.int64)
+        self.rules = descent.Rules(
+            sums=np.stack([compiled.sums.first, compiled.sums.following])[:, :, self.order],
+            limits=compiled.rules.limits[self.order],
+            used=self.used,
+            thickness=self.order.index(_SUMS["thickness"]),
+            may_first=compiled.rules.first,
+            may_last=compiled.rules.last,
+            may_touch=compiled.rules.neighbours,
+            max_sheets=compiled.rules.max_sheets,
+            mirror=self.mirror,
+        )
+        self.physics = self._physics()
+        self.row_orders = threading.local()
+
+    def _physics(self) -> descent.Physics:
+        from stackopt import descent
+
+        rows, tables = self.compiled.rows, self.compiled.tables
+        bonded = tables.following is not tables.first
+        kinds = (tables.first, tables.following) if bonded else (tables.first,)
         # A Chebyshev sum is nowhere above the sum of its coefficients' sizes.
         constant, others = rows.open_coefficients[:, 0], rows.open_coefficients[:, 1:]
-        self.highest = constant + np.abs(others).sum(axis=1) + 1e-6
-        self.orders = threading.local()
+        return descent.Physics(
+            table=np.concatenate(kinds),
+            closing=np.concatenate([_closing(self.compiled, table) for table in kinds]),
+            bonded=len(self.compiled.sheets) if bonded else 0,
+            scale=np.stack([tables.first_scale, tables.following_scale]),
+            row_block=rows.row_block,
+            start=rows.start,
+            fixed_scale=rows.fixed_scale,
+            coefficients=rows.open_coefficients,
+            highest=constant + np.abs(others).sum(axis=1) + 1e-6,
+            reach=rows.reach_m,
+            thickest=rows.thickest_m,
+            required=rows.required_db - MARGIN_SLACK_DB,
+        )
 
-    def cover(self, values: Integers) -> tuple[Integers, Integers]:
-        """Cover of objective vectors, shape (member, objective), and its steps."""
+    def cover(self, values: Integers) -> descent.Cover:
+        """Cover of objective vectors, shape (member, objective)."""
         from stackopt import descent
 
         names = self.compiled.problem.search.objectives
-        axis = [[n for n, name in enumerate(names) if _SUMS.get(name) == wanted] for wanted in self.axes.tolist()]
-        columns = [values[:, at[0]] if at else np.zeros(len(values), dtype=np.int64) for at in axis]
-        sheets = values[:, names.index("sheets")] if "sheets" in names else np.zeros(len(values), dtype=np.int64)
-        largest = self.compiled.rules.max_sheets * self.compiled.sums.following.max(axis=0)
-        step = np.ones(2, dtype=np.int64)
+        nothing = np.zeros(len(values), dtype=np.int64)
+        sheets = values[:, names.index("sheets")] if "sheets" in names else nothing
+        columns = [values[:, n] for n, name in enumerate(names) if name in _SUMS]
+        columns += [nothing] * (3 - len(columns))
+        reachable = self.compiled.rules.max_sheets * self.rules.sums[1].max(axis=0)
+        shift = np.zeros(2, dtype=np.int64)
         for n in (0, 1):
-            top = int(columns[n].max()) if len(values) else int(largest[self.axes[n]] if self.axes[n] >= 0 else 0)
-            step[n] = max(1, -(-top // (descent.CELLS - 1)))
-        cover = np.full((self.levels, descent.CELLS, descent.CELLS), descent.UNCOVERED, dtype=np.int64)
-        for member in zip(*columns, sheets, strict=True):
-            descent.add_to_cover(cover, step, *member)
-        return cover, step
+            top = int(columns[n].max()) if len(values) else int(reachable[n])
+            shift[n] = max(0, (top // (descent.CELLS - 1)).bit_length())
+        least = np.full((self.levels, descent.CELLS, descent.CELLS), descent.UNCOVERED, dtype=np.int64)
+        # A cell stands for its lower corner, so that a stack counts from the cell above its own.
+        first, second = (-(-columns[n] >> shift[n]) for n in (0, 1))
+        inside = (first < descent.CELLS) & (second < descent.CELLS)
+        level = sheets if self.levels > 1 else nothing
+        np.minimum.at(least, (level[inside], first[inside], second[inside]), columns[2][inside])
+        for axis in range(3):
+            np.minimum.accumulate(least, axis=axis, out=least)
+        return descent.Cover(least, shift)
 
     def descend(
         self,
-        prefix: Integers,
-        recurse: bool,
+        prefix: tuple[int, ...],
         stop: NDArray[np.uint8],
-        cover: Integers,
-        step: Integers,
-        keep_all: bool,
-        room: int,
+        cover: descent.Cover,
         counters: Integers,
+        keep_all: bool = False,
+        room: int = ROOM,
     ) -> tuple[Integers, bool]:
-        """Run the compiled descent below a prefix; see `stackopt.descent.descend`."""
+        """Open a share's prefix, and everything below a pair; see `stackopt.descent.descend`."""
         from stackopt import descent
 
-        compiled = self.compiled
-        rows, rules, tables, sums = compiled.rows, compiled.rules, compiled.tables, compiled.sums
-        if not hasattr(self.orders, "rows"):
-            self.orders.rows = np.arange(len(rows.required_db))
+        if not hasattr(self.row_orders, "rows"):
+            self.row_orders.rows = np.arange(len(self.physics.required))
         found, finished = descent.descend(
-            prefix, recurse, stop,
-            sums.first, sums.following, rules.limits, rules.first, rules.last, rules.neighbours,
-            rules.max_sheets, self.axes, self.mirror,
-            tables.first, tables.following, tables.first_scale, tables.following_scale,
-            self.closing_first, self.closing_following,
-            rows.row_block, rows.start, rows.fixed_scale, rows.open_coefficients,
-            self.highest, rows.reach_m, rows.thickest_m, rows.required_db - MARGIN_SLACK_DB,
-            cover, step, keep_all, room, self.orders.rows, counters,
-        )  # fmt: skip
+            np.array(prefix, dtype=np.int64),
+            len(prefix) == PREFIX,
+            stop,
+            self.rules,
+            self.physics,
+            cover,
+            keep_all,
+            room,
+            self.row_orders.rows,
+            counters,
+        )
         return found, bool(finished)
 
 
@@ -272,7 +324,7 @@ def mirror_holds(compiled: CompiledProblem) -> bool:
 
 
 def _closing(compiled: CompiledProblem, table: Real) -> Real:
-    """alpha = (A + B e)/w and beta = (C + D e)/w of every sheet, rows outermost, then sheets, then blocks."""
+    """Tabulate alpha = (A + B e)/w and beta = (C + D e)/w of every sheet, rows outermost, then sheets, then blocks."""
     sheets = len(compiled.sheets)
     planes = table.reshape(sheets, -1, SHEET // LANES, LANES)
     entries = planes[:, :, 0::2] + 1j * planes[:, :, 1::2]
@@ -284,4 +336,4 @@ def _closing(compiled: CompiledProblem, table: Real) -> Real:
     beta = (entries[:, :, 2] + entries[:, :, 3] * ratio) * share
     blocks = np.stack([alpha.real, alpha.imag, beta.real, beta.imag], axis=2).reshape(sheets, -1, CLOSING)
     edges = compiled.rows.row_block
-    return np.concatenate([blocks[:, a:b].reshape(-1) for a, b in zip(edges[:-1], edges[1:], strict=True)])
+    return np.concatenate([blocks[:, a:b].reshape(-1) for a, b in pairwise(edges)])

@@ -21,9 +21,9 @@ from typing import Any
 from stackopt.checkpoint import read_checkpoint, write_checkpoint
 from stackopt.errors import Finding, InputError, InterruptedRunError, RunError
 from stackopt.front import Front
+from stackopt.outputs.files import write_whole
 from stackopt.outputs.plots import write_trade_off
 from stackopt.outputs.tables import write_equals, write_front
-from stackopt.outputs.files import write_whole
 from stackopt.problem import Problem
 from stackopt.readers import read_problem
 from stackopt.search import Search
@@ -328,7 +328,7 @@ def _new_folder(problem: Problem, out: Path | None) -> Path:
 
 
 def _copy_inputs(problem: Problem, folder: Path) -> None:
-    """Copy the input files, keeping where they lie relative to one another, so that the copies read like the originals."""
+    """Copy the input files, keeping where they lie relative to one another: the copies read like the originals."""
     try:
         for name in problem.files:
             target = folder / _input_path(problem, Path(name))

@@ -1,9 +1,9 @@
-"""The phases of a search on one problem: explore, prove, confirm, and again until every stack of the front is confirmed.
+"""The phases of a search on one problem: explore, prove, confirm, and again until every stack is confirmed.
 
 A round works on a grid of frequencies and a quadrature. Confirming judges the front on a grid ten times denser with a
 finer quadrature; where a stack fails, its worst frequency joins the grid of the next round (or, if it is in the grid
-already, the quadrature is refined). Fewer frequencies only relax the problem, so a proved front whose every stack passes
-is the complete front of the dense grid too.
+already, the quadrature is refined). Fewer frequencies only relax the problem, so a proved front whose stacks all pass is
+the complete front of the dense grid too.
 """
 
 from __future__ import annotations
@@ -96,7 +96,7 @@ class Search:
             save()
 
     def start_from(self, stacks: list[Stack]) -> None:
-        """Skip exploring and prove from stacks known already; those that are no stacks of the problem are passed over."""
+        """Skip exploring and prove from known stacks; those that are no stacks of the problem are passed over."""
         known = set(self.compiled.sheets)
         usable = [stack for stack in stacks if set(stack) <= known and len(stack) <= self.compiled.rules.max_sheets]
         if usable:
@@ -300,8 +300,8 @@ class Search:
             return f"No stack meets the mask: proved over {number:.3g} stacks. {self._nearest()}"
         if complete:
             return (
-                f"Complete: all {number:.3g} stacks that the sheets can form are settled, none is missing from the front, "
-                f"and every stack of it holds on a grid {DENSITY} times denser."
+                f"Complete: all {number:.3g} stacks that the sheets can form are settled, none is missing from the "
+                f"front, and every stack of it holds on a grid {DENSITY} times denser."
             )
         if self.obstacle is not None:
             settled = f"Explored, not proved: {self.obstacle}."

@@ -21,6 +21,9 @@ Integers = NDArray[np.int64]
 Booleans = NDArray[np.bool_]
 
 
+SCREENED_DB = 20.0
+
+
 @dataclass(frozen=True)
 class Judged:
     """Population after judging: integer objectives, shape (stack, objective); constraint violation; feasibility.
@@ -111,15 +114,15 @@ class Stock:
     def judge(self, genes: Integers, screen: evaluate.Screen) -> Judged:
         """Objectives and constraint of tidy genes.
 
-        ``screen`` tells which objective vectors are already covered by a feasible stack; those need no attenuation
-        and count as slightly infeasible, so that a search leaves them. Stacks against the rules are judged by how far
-        they break them, above any margin.
+        ``screen`` tells which objective vectors a feasible stack is known to beat; those need no attenuation and count
+        as `SCREENED_DB` short of the mask, so that a search prefers stacks that nearly meet it. Stacks against the
+        rules are judged by how far they break them, above any margin.
         """
         compiled, codes = self.tabulated(genes)
         totals = evaluate.sums(compiled, codes)
         lawful = evaluate.allowed(compiled, codes, totals)
         wants_margin = "margin" in compiled.problem.search.objectives
-        violation = np.where(lawful, 1e-6, 1e3 + evaluate.excess(compiled, codes, totals))
+        violation = np.where(lawful, SCREENED_DB, 1e3 + evaluate.excess(compiled, codes, totals))
         values = evaluate.objective_values(compiled, codes, totals, np.zeros(len(codes)))
         needed = lawful & (True if wants_margin else ~screen(values))
         if np.any(needed):

@@ -139,7 +139,7 @@ def _edges(problem: Problem) -> str:
 
 def _saturation(permeable: Iterable[Material]) -> str:
     text = "Permeability is taken at small fields: keep the peak flux density below half of saturation"
-    known = [f"{material.name} {material.saturation_t / 2:.2g} T" for material in permeable if material.saturation_t]
+    known = [f"{material.name} {material.saturation_t / 2:.3g} T" for material in permeable if material.saturation_t]
     return f"{text} ({', '.join(known)})." if known else f"{text}."
 
 

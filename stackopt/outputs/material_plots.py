@@ -7,12 +7,14 @@ import os
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from numpy.typing import NDArray
 
 from stackopt.outputs import plot_style as style
 from stackopt.outputs.materials import LARGEST_DEPTH_M, is_magnetic, permeability, skin_depth_m
 from stackopt.outputs.words import length_words
 from stackopt.problem import MaterialSet
 
+Real = NDArray[np.float64]
 FREQUENCY_HZ = np.logspace(1.0, 9.0, 161)
 """What is drawn, Hz: from below the mains to above 1 GHz masks."""
 
@@ -35,13 +37,15 @@ def material_figure(material_set: MaterialSet) -> Figure:
     figure.suptitle(style.wrapped(f"{material_set.title}: materials over frequency", 90), fontsize=11)
     real, loss, depth = np.ravel(figure.subplots(3, 1, sharex=True, squeeze=False))
     axis = style.FrequencyAxis(FREQUENCY_HZ)
+    handles = []
     for number, material in enumerate(materials):
-        values = permeability(material, FREQUENCY_HZ)
-        if is_magnetic(material):
+        values, depths = permeability(material, FREQUENCY_HZ), skin_depth_m(material, FREQUENCY_HZ)
+        magnetic = is_magnetic(material)
+        if magnetic:
             _draw(real, axis, values.real, number)
             _draw(loss, axis, -values.imag, number)
-        depths = skin_depth_m(material, FREQUENCY_HZ)
-        _draw(depth, axis, np.where(depths <= LARGEST_DEPTH_M, depths * 1e3, np.nan), number)
+        if _draw(depth, axis, np.where(depths <= LARGEST_DEPTH_M, depths * 1e3, np.nan), number) or magnetic:
+            handles.append(style.legend_line(number, material.name))
     titles = ("real part of the relative permeability", "loss, minus the imaginary part", "skin depth, mm")
     for axes, title in zip((real, loss, depth), titles, strict=True):
         axis.apply(axes)
@@ -51,16 +55,18 @@ def material_figure(material_set: MaterialSet) -> Figure:
         axes.label_outer()
     _floor(real, 0.5)
     _floor(loss, 0.05)
-    handles = [style.legend_line(number, material.name) for number, material in enumerate(materials)]
     figure.legend(handles=handles, loc="outside right upper", fontsize=9, frameon=False, handlelength=3.2)
     _explain(figure)
     return figure
 
 
-def _draw(axes: Axes, axis: style.FrequencyAxis, values: np.ndarray, number: int) -> None:
+def _draw(axes: Axes, axis: style.FrequencyAxis, values: Real, number: int) -> bool:
+    """Draw what is positive of a curve; tell whether anything is."""
     shown = np.where(values > 0.0, values, np.nan)
-    if np.any(np.isfinite(shown)):
+    something = bool(np.any(np.isfinite(shown)))
+    if something:
         style.draw_curve(axes, axis, FREQUENCY_HZ, shown, number)
+    return something
 
 
 def _floor(axes: Axes, lowest: float) -> None:

@@ -11,6 +11,7 @@ from rich.table import Table
 from stackopt.outputs.tables import plain_table
 from stackopt.outputs.words import conductivity_words, law_words, number_words
 from stackopt.physics.media import Medium, line_constants
+from stackopt.physics.permeability import tables_in
 from stackopt.problem import Material, MaterialSet
 from stackopt.units import format_frequency, format_thickness
 
@@ -25,12 +26,12 @@ Complex = NDArray[np.complex128]
 
 def permeability(material: Material, frequency_hz: Real) -> Complex:
     """Relative permeability, NaN where a table does not reach, shape (frequency,)."""
+    reached = np.ones(np.shape(frequency_hz), dtype=bool)
+    for table in tables_in(material.permeability):
+        low, high = table.octave_hz
+        reached &= (frequency_hz >= low) & (frequency_hz <= high)
     values = np.full(np.shape(frequency_hz), complex(np.nan, np.nan))
-    for index, frequency in enumerate(frequency_hz):
-        try:
-            values[index] = material.permeability(np.array([frequency]))[0]
-        except ValueError:  # more than an octave outside a table
-            continue
+    values[reached] = material.permeability(frequency_hz[reached])
     return values
 
 
@@ -46,8 +47,8 @@ def skin_depth_m(material: Material, frequency_hz: Real) -> Real:
     The general 1/Re(u), which is the usual sqrt(2/(w mu sigma)) for metals and counts magnetic loss too.
     """
     medium = Medium(permeability(material, frequency_hz), material.conductivity_s_per_m, material.permittivity)
-    u, _, _ = line_constants(medium, np.zeros((len(frequency_hz), 1), dtype=complex), frequency_hz, "TE")
-    with np.errstate(divide="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore"):  # insulators, and frequencies that a table does not reach
+        u, _, _ = line_constants(medium, np.zeros((len(frequency_hz), 1), dtype=complex), frequency_hz, "TE")
         return np.asarray(1.0 / u[:, 0].real)
 
 
@@ -55,6 +56,7 @@ def material_tables(material_set: MaterialSet, origins: bool = False) -> Iterato
     """Show a material set: stock, properties, permeability and skin depth over frequency, and origins on request."""
     yield _stock_table(material_set)
     yield _property_table(material_set)
+    yield _tolerance_table(material_set)
     yield _law_table(material_set)
     yield _permeability_table(material_set)
     yield _depth_table(material_set)
@@ -84,32 +86,33 @@ def _price(material: Material) -> str:
 
 
 def _property_table(material_set: MaterialSet) -> Table:
-    heads = ("material", "conductivity", "density\nkg/m^3", "saturation\nT", "anodic index\nV", "tolerances\n%")
-    table = _titled("Properties", *heads)
-    for column in table.columns[1:5]:
-        column.justify = "right"
+    heads = ("conductivity", "density\nkg/m^3", "saturation\nT", "anodic index\nV")
+    table = _numbers("Properties", *heads)
     for name, material in material_set.materials.items():
         table.add_row(
             name,
             conductivity_words(material.conductivity_s_per_m),
             f"{material.density_kg_per_m3:.0f}",
-            _or_dash(material.saturation_t, ".2g"),
+            _or_dash(material.saturation_t, ".3g"),
             _or_dash(material.anodic_index_v, "+.2f"),
-            _tolerances(material),
         )
     return table
 
 
-def _tolerances(material: Material) -> str:
-    given = (
-        ("thickness", material.tolerance.thickness),
-        ("conductivity", material.tolerance.conductivity),
-        ("permeability", material.tolerance.permeability),
-    )
-    return ", ".join(f"{word} {_percent(down, up)}" for word, (down, up) in given if down or up) or "-"
+def _tolerance_table(material_set: MaterialSet) -> Table:
+    table = _numbers("Tolerances", "thickness\n%", "conductivity\n%", "permeability\n%")
+    for name, material in material_set.materials.items():
+        given = material.tolerance
+        cells = [_percent(*pair) for pair in (given.thickness, given.conductivity, given.permeability)]
+        if any(cell != "-" for cell in cells):
+            table.add_row(name, *cells)
+    table.caption = "Not listed: materials of which the set gives no tolerance."
+    return table
 
 
 def _percent(down: float, up: float) -> str:
+    if down == up == 0.0:
+        return "-"
     return f"±{up * 100:.3g}" if up == -down else f"{down * 100:+.3g}/{up * 100:+.3g}"
 
 
@@ -123,7 +126,7 @@ def _law_table(material_set: MaterialSet) -> Table:
 
 
 def _permeability_table(material_set: MaterialSet) -> Table:
-    table = _over_frequency("Relative permeability, magnitude")
+    table = _numbers("Relative permeability, magnitude", *map(format_frequency, FREQUENCIES_HZ))
     for name, material in material_set.materials.items():
         if is_magnetic(material):
             values = np.abs(permeability(material, np.array(FREQUENCIES_HZ)))
@@ -137,7 +140,7 @@ def _three_digits(value: float) -> str:
 
 
 def _depth_table(material_set: MaterialSet) -> Table:
-    table = _over_frequency("Skin depth, where the field has fallen to 37 %")
+    table = _numbers("Skin depth, where the field has fallen to 37 %", *map(format_frequency, FREQUENCIES_HZ))
     for name, material in material_set.materials.items():
         depths = skin_depth_m(material, np.array(FREQUENCIES_HZ))
         if np.any(depths <= LARGEST_DEPTH_M):
@@ -164,8 +167,8 @@ def _origin_table(material_set: MaterialSet) -> Table:
     return table
 
 
-def _over_frequency(title: str) -> Table:
-    table = _titled(title, "material", *map(format_frequency, FREQUENCIES_HZ))
+def _numbers(title: str, *heads: str) -> Table:
+    table = _titled(title, "material", *heads)
     for column in table.columns[1:]:
         column.justify = "right"
         column.no_wrap = True

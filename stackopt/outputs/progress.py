@@ -79,6 +79,8 @@ class TerminalProgress:
         if self._status is None:
             return
         seconds = time.monotonic() - self._started
+        if self._live is not None:
+            self._live.update("")
         front = f", {_stacks(self._status.front_size)} on the front" if self._status.front_size else ""
         self._console.print(f"{self._status.phase}: done in {duration_words(seconds)}{front}", soft_wrap=True)
 
@@ -91,7 +93,9 @@ class TerminalProgress:
             width=min(_BAR_WIDTH, max(self._console.width - 50, 6)),
             pulse=not known,
         )
-        share = f"{status.fraction * 100:3.0f} %" if status.fraction is not None else duration_words(seconds)
+        share = (
+            f"{status.fraction * 100:3.0f} %" if status.fraction is not None else f"{duration_words(seconds)} so far"
+        )
         left = "" if status.seconds_left is None else f"{duration_words(status.seconds_left)} left"
         line.add_row(status.phase, bar, *filter(None, (share, status.rate, left)))
         below = _front_words(status)
@@ -104,7 +108,7 @@ def status_line(status: Status) -> str:
     Examples
     --------
     >>> status_line(Status("proving", 0.42, "41,000 stacks/s", 12, {"mass": "1.2 kg/m^2"}, 80.0))
-    'proving: 42 %, 41,000 stacks/s, 1 min 20 s left; front of 12 stacks, least mass 1.2 kg/m^2'
+    'proving: 42 %, 41,000 stacks/s, 1 min 20 s left; front of 12 stacks, least 1.2 kg/m^2'
     """
     parts = []
     if status.fraction is not None:
@@ -121,8 +125,11 @@ def status_line(status: Status) -> str:
 def _front_words(status: Status) -> str:
     if not status.front_size:
         return ""
-    best = [f"{'largest' if name == 'margin' else 'least'} {name} {value}" for name, value in status.best.items()]
-    return ", ".join([f"front of {_stacks(status.front_size)}", *best])
+    least = [value for name, value in status.best.items() if name != "margin"]
+    text = f"front of {_stacks(status.front_size)}"
+    if least:
+        text += f", least {', '.join(least)}"
+    return text + (f", largest margin {status.best['margin']}" if "margin" in status.best else "")
 
 
 def _stacks(count: int) -> str:
@@ -135,7 +142,7 @@ def duration_words(seconds: float) -> str:
     Examples
     --------
     >>> duration_words(4.2), duration_words(80.0), duration_words(7400.0), duration_words(200000.0)
-    ('4.2 s', '1 min 20 s', '2 h 3 min', '2 d 8 h')
+    ('4.2 s', '1 min 20 s', '2 h 3 min', '2 d 7 h')
     """
     if seconds < 9.95:
         return f"{max(seconds, 0.0):.1f} s"

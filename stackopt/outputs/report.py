@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from rich.console import Console
 
-from stackopt.compiled import CompiledProblem
+from stackopt.compiled import MARGIN_SLACK_DB, CompiledProblem
 from stackopt.outputs.words import (
     count_words,
     field_words,
@@ -22,7 +22,7 @@ from stackopt.outputs.words import (
     where_words,
 )
 from stackopt.prediction import Prediction
-from stackopt.problem import Problem, format_stack
+from stackopt.problem import Problem, Sheet, Stack, format_stack
 from stackopt.units import format_frequency, format_thickness
 
 if TYPE_CHECKING:
@@ -38,7 +38,7 @@ def problem_sections(compiled: CompiledProblem) -> list[Section]:
     Parameters
     ----------
     compiled : CompiledProblem
-        With all the sheets that the problem allows.
+        With the sheets of `sheets_to_look_at`.
 
     Returns
     -------
@@ -60,10 +60,8 @@ def section_text(lines: Sequence[tuple[str, str]], width: int) -> str:
 
     Examples
     --------
-    >>> print(section_text([("mask", "14 dB at 50 Hz"), ("-", "a remark of several words")], 24))
-      mask  14 dB at 50 Hz
-      -     a remark of
-            several words
+    >>> section_text([("mask", "14 dB at 50 Hz"), ("-", "a remark of several words")], 28).splitlines()
+    ['  mask  14 dB at 50 Hz', '  -     a remark of several', '        words']
     """
     indent = 4 + max(len(what) for what, _ in lines)
     rows = []
@@ -71,6 +69,11 @@ def section_text(lines: Sequence[tuple[str, str]], width: int) -> str:
         wrapped = textwrap.wrap(text, max(width - indent, 20), break_long_words=False, break_on_hyphens=False)
         rows += [f"  {what if number == 0 else '':{indent - 2}}{part}" for number, part in enumerate(wrapped or [""])]
     return "\n".join(rows)
+
+
+def show_text(console: Console, text: str) -> None:
+    """Print a paragraph, wrapped between words to the width of the console."""
+    console.print(textwrap.fill(text, console.width, break_long_words=False, break_on_hyphens=False), soft_wrap=True)
 
 
 def _head(problem: Problem) -> Iterator[tuple[str, str]]:
@@ -89,8 +92,9 @@ def short_path(path: str | os.PathLike[str]) -> str:
 
 
 def _sheets_heading(problem: Problem) -> str:
-    names = "material" if len(problem.use) == 1 else "materials"
-    return f"Sheets: {len(problem.sheets)} of {len(problem.use)} {names}"
+    names = "1 material" if len(problem.use) == 1 else f"{len(problem.use)} materials"
+    gauges = f"{len(problem.sheets)} gauge{'s' if len(problem.sheets) != 1 else ''}"
+    return f"Sheets: {gauges} of {names}" if problem.sheets else f"Sheets of {names}"
 
 
 def _sheets(problem: Problem) -> Iterator[tuple[str, str]]:
@@ -156,27 +160,38 @@ def _rules(compiled: CompiledProblem) -> Iterator[tuple[str, str]]:
 
 def _choice(compiled: CompiledProblem) -> str:
     """Tell how many stacks there are."""
-    rules, problem = compiled.problem.rules, compiled.problem
-    limited = any(
-        limit is not None for limit in (rules.max_thickness_m, rules.max_mass_kg_per_m2, rules.max_cost_per_m2)
-    )
-    text = f"{count_words(count_stacks(compiled))} stacks of the gauges" + (
-        " before the limits are applied" if limited else ""
-    )
-    return text + (f"; any thickness of {', '.join(problem.continuous)} besides" if problem.continuous else "")
+    problem = compiled.problem
+    rules = problem.rules
+    parts = []
+    if problem.sheets:
+        limits = (rules.max_thickness_m, rules.max_mass_kg_per_m2, rules.max_cost_per_m2)
+        before = " before the limits are applied" if any(limit is not None for limit in limits) else ""
+        parts.append(f"{count_words(count_stacks(compiled))} stacks of the gauges{before}")
+    if problem.continuous:
+        parts.append(f"any thickness of {', '.join(problem.continuous)} within the range")
+    return ", and ".join(parts)
 
 
 def count_stacks(compiled: CompiledProblem) -> float:
-    """Number of stacks that keep the faces and neighbours; limits on the sums are not looked at."""
-    rules = compiled.rules
-    if not compiled.sheets:
-        return 0.0
-    ways = rules.first.astype(float)
-    total = 0.0
+    """Number of stacks of gauges that keep the faces and neighbours; limits on the sums are not looked at."""
+    rules, gauges = compiled.rules, len(compiled.problem.sheets)
+    first, last = rules.first[:gauges].astype(float), rules.last[:gauges]
+    neighbours = rules.neighbours[:gauges, :gauges].astype(float)
+    total, ways = 0.0, first
     for _ in range(rules.max_sheets):
-        total += float(ways @ rules.last)
-        ways = ways @ rules.neighbours.astype(float)
+        total += float(ways @ last)
+        ways = ways @ neighbours
     return total
+
+
+def sheets_to_look_at(problem: Problem) -> Stack:
+    """Gauges, and the thin end, the middle and the thick end of each thickness range: what a quick look is made of."""
+    samples = []
+    for name in problem.continuous:
+        low, high = problem.materials[name].thickness_range_m or (0.0, 0.0)
+        middle = min(max(float(f"{(low * high) ** 0.5:.2g}"), low), high)
+        samples += [Sheet(name, thickness) for thickness in (low, middle, high)]
+    return tuple(dict.fromkeys((*problem.sheets, *samples)))
 
 
 def _search(problem: Problem) -> Iterator[tuple[str, str]]:
@@ -190,18 +205,18 @@ def _search(problem: Problem) -> Iterator[tuple[str, str]]:
 def show_sections(console: Console, compiled: CompiledProblem) -> None:
     """Print `problem_sections`."""
     for number, (heading, lines) in enumerate(problem_sections(compiled)):
-        console.print(f"{chr(10) if number else ''}{heading}", style="bold")
+        console.print(f"{chr(10) if number else ''}{heading}", style="bold", soft_wrap=True)
         console.print(section_text(lines, console.width), soft_wrap=True)
 
 
 def show_verdicts(console: Console, problem: Problem, predictions: Sequence[Prediction]) -> None:
     """Print for each stack whether it meets the mask, what it weighs, costs and measures, and the rules it breaks."""
     for number, prediction in enumerate(predictions, start=1):
-        console.print(f"Stack {number}: {format_stack(prediction.row.stack)}", style="bold")
+        console.print(f"Stack {number}: {format_stack(prediction.row.stack)}", style="bold", soft_wrap=True)
         lines = [("mask", verdict_words(prediction, problem))]
         lines.append(("totals", totals_words(prediction.row, problem.currency)))
         lines += [("breaks a rule", rule) for rule in prediction.broken]
-        console.print(section_text(lines, console.width), soft_wrap=True)
+        console.print(section_text(lines, console.width) + "\n", soft_wrap=True)
 
 
 def verdict_words(prediction: Prediction, problem: Problem) -> str:
@@ -210,7 +225,18 @@ def verdict_words(prediction: Prediction, problem: Problem) -> str:
     where = where_words(row, problem)
     if prediction.meets_mask:
         return f"meets the mask; smallest margin {smallest_margin_words(prediction)} {where}"
-    return f"does not meet the mask; misses by {-row.margin_db:.2f} dB {where}"
+    return f"does not meet the mask; misses by {miss_words(row.margin_db)} {where}"
+
+
+def miss_words(margin_db: float) -> str:
+    """Write by how much a negative margin misses.
+
+    Examples
+    --------
+    >>> miss_words(-3.456), miss_words(-0.001)
+    ('3.46 dB', 'less than 0.01 dB')
+    """
+    return f"{-margin_db:.2f} dB" if margin_db <= -0.005 else "less than 0.01 dB"
 
 
 def smallest_margin_words(prediction: Prediction) -> str:
@@ -221,15 +247,23 @@ def smallest_margin_words(prediction: Prediction) -> str:
     return margin_words(float(curve.attenuation_db[index]), float(curve.required_db[index]))
 
 
-def scouted_words(problem: Problem, scouted: Scouted, path: Path) -> str:
-    """Say whether a quick look found a stack that meets the mask."""
-    stack = format_stack(scouted.stack)
-    where = f"{format_frequency(scouted.frequency_hz)} of '{scouted.requirement}'"
-    if scouted.margin_db >= 0.0:
-        return (
-            f"Yes, the mask can be met: {stack} meets it with {scouted.margin_db:.2f} dB to spare, tightest at {where}."
-        )
-    return (
-        f"A quick look at {scouted.tried:,} stacks found none that meets the mask. The best is {stack}; it misses by "
-        f"{-scouted.margin_db:.2f} dB at {where}. To decide it: stackopt search {path}"
-    )
+def show_scouted(console: Console, problem: Problem, scouted: Scouted, path: Path) -> None:
+    """Print whether a quick look found a stack that meets the mask, and which."""
+    console.print("Can the mask be met?", style="bold")
+    console.print(section_text(_scouted(problem, scouted, path), console.width), soft_wrap=True)
+
+
+def _scouted(problem: Problem, scouted: Scouted, path: Path) -> list[tuple[str, str]]:
+    if not scouted.stack:
+        return [("answer", "no: the limits and rules allow no stack at all; loosen them or use other sheets")]
+    where = f"at {format_frequency(scouted.frequency_hz)}"
+    if len(problem.requirements) > 1:
+        where += f" of '{scouted.requirement}'"
+    if scouted.margin_db >= -MARGIN_SLACK_DB:
+        answer, margin = "yes, for example by", f"{scouted.margin_db:.2f} dB to spare where it is tightest, {where}"
+        return [("answer", answer), ("stack", format_stack(scouted.stack)), ("margin", margin)]
+    return [
+        ("answer", f"none was found by a quick look at {scouted.tried:,} stacks; to decide it: stackopt search {path}"),
+        ("best", format_stack(scouted.stack)),
+        ("margin", f"misses by {miss_words(scouted.margin_db)} {where}"),
+    ]

@@ -197,22 +197,27 @@ def choose_rule(
     source_side, victim_side : sequence of (Medium, thickness in m)
         Fixed layers.
     error_db : float
-        Largest deviation from `REFERENCE_RULE`, dB, wherever the attenuation is below 200 dB.
+        Largest deviation from `REFERENCE_RULE`, dB, wherever the attenuation is below 200 dB. The trials are held to
+        half of it, because other stacks of the same sheets deviate up to twice as much.
 
     Returns
     -------
     rule, worst : HankelRule, float
-        The rule and its largest deviation, dB.
+        The rule and its largest deviation on the trials, dB.
     """
     reference = lines_of(REFERENCE_RULE)
-    exact = [attenuation_db(reference, trial, source_side, victim_side) for trial in trials]
+    exact = [(trial, attenuation_db(reference, trial, source_side, victim_side)) for trial in trials]
+    limit = 0.5 * error_db
 
     def deviation(rule: HankelRule) -> float:
         lines = lines_of(rule)
         worst = 0.0
-        for trial, known in zip(trials, exact, strict=True):
+        for number, (trial, known) in enumerate(exact):
             error = np.abs(attenuation_db(lines, trial, source_side, victim_side) - known)[known < 200.0]
             worst = max(worst, float(np.max(error, initial=0.0)))
+            if worst > limit:
+                exact.insert(0, exact.pop(number))  # what one rule fails at is the first that the next must pass
+                break
         return worst
 
     for count in (12, 16, 20, 24, 28, 32, 40, 48, 56, 64, 80, 96, 128, 192):
@@ -220,6 +225,6 @@ def choose_rule(
             for high in (2.6, 2.9, 3.2, 3.6):
                 rule = HankelRule(count, low, high)
                 worst = deviation(rule)
-                if worst <= error_db:
+                if worst <= limit:
                     return rule, worst
     return REFERENCE_RULE, 0.0

@@ -1,0 +1,351 @@
+"""The proof, the exploring and the list of equal stacks against trying every stack of random small problems.
+
+The other side is `brute_force`: rules and sums written again, attenuation by the readable cascade.
+"""
+
+from __future__ import annotations
+
+import time
+from collections import Counter
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import brute_force
+import numpy as np
+import pytest
+import small_problems
+from brute_force import Vector
+from builders import MATERIALS, build_problem, film, material
+from numpy.typing import NDArray
+
+from stackopt import evaluate
+from stackopt.archive import Archive
+from stackopt.compiled import CompiledProblem, compile_problem
+from stackopt.equals import equal_stacks
+from stackopt.explore import Explorer
+from stackopt.problem import CoaxialLoops, Mask, PlaneWave, Problem, Sheet, Stack
+from stackopt.prove import Prover, Tally, count_stacks, mirror_holds, why_not_provable
+from stackopt.stock import Stock
+
+Integers = NDArray[np.int64]
+
+SMALL = range(220)
+DEEP = range(1000, 1010)
+"""Eight sheets, up to four in a stack: 4680 stacks, longer fronts."""
+
+
+@dataclass(frozen=True)
+class Case:
+    """A problem with what trying every stack of it gives."""
+
+    problem: Problem
+    compiled: CompiledProblem
+    feasible: dict[Stack, Vector]
+    front: list[Vector]
+
+
+def make_case(seed: int) -> Case:
+    problem, compiled = small_problems.small_problem(seed, *((8, 4) if seed in DEEP else ()))
+    feasible = brute_force.feasible_stacks(problem, compiled.rows.spectra)
+    return Case(problem, compiled, feasible, brute_force.front_of(list(feasible.values())))
+
+
+@pytest.fixture(scope="module", params=[*SMALL, *DEEP])
+def case(request: pytest.FixtureRequest) -> Case:
+    return make_case(request.param)
+
+
+@pytest.fixture(scope="module", params=DEEP)
+def deep(request: pytest.FixtureRequest) -> Case:
+    return make_case(request.param)
+
+
+def start(compiled: CompiledProblem, stacks: list[Stack] | None = None) -> Prover:
+    """A proof that begins with some stacks, none unless given."""
+    archive = Archive(len(compiled.problem.search.objectives), compiled.rules.max_sheets)
+    if stacks:
+        codes = evaluate.encode(compiled, stacks)
+        totals = evaluate.sums(compiled, codes)
+        archive.add(evaluate.objective_values(compiled, codes, totals, np.zeros(len(codes))), codes)
+    return Prover(compiled, archive, Tally())
+
+
+def rows_of(prover: Prover) -> list[Vector]:
+    return [tuple(vector) for vector in prover.archive.values.tolist()]
+
+
+def check_members(case: Case, prover: Prover) -> None:
+    """Every member is a feasible stack that reaches its objectives."""
+    for stack, vector in zip(evaluate.decode(case.compiled, prover.archive.codes), rows_of(prover), strict=True):
+        assert case.feasible[stack] == vector
+
+
+class TestAgainstEveryStack:
+    def test_rules_and_sums(self, case: Case) -> None:
+        stacks = list(brute_force.every_stack(case.problem))
+        codes = evaluate.encode(case.compiled, stacks)
+        assert len(stacks) == count_stacks(len(case.compiled.sheets), case.problem.rules.max_sheets)
+        totals = evaluate.sums(case.compiled, codes)
+        assert totals.tolist() == [list(brute_force.totals(case.problem, stack)) for stack in stacks]
+        allowed = evaluate.allowed(case.compiled, codes)
+        assert allowed.tolist() == [brute_force.is_allowed(case.problem, stack) for stack in stacks]
+
+    def test_proved_front(self, case: Case) -> None:
+        prover = start(case.compiled)
+        assert prover.run()
+        assert prover.complete
+        assert prover.covered == 1.0
+        assert rows_of(prover) == case.front
+        check_members(case, prover)
+
+    def test_known_stacks_change_nothing(self, case: Case) -> None:
+        random = np.random.default_rng(len(case.feasible))
+        known = [stack for stack in case.feasible if random.random() < 0.3]
+        prover = start(case.compiled, known)
+        assert prover.run()
+        assert rows_of(prover) == case.front
+        check_members(case, prover)
+
+    def test_mirror_images(self, case: Case, monkeypatch: pytest.MonkeyPatch) -> None:
+        monkeypatch.setattr("stackopt.prove.mirror_holds", lambda _: False)
+        prover = start(case.compiled)
+        assert not prover.tables.mirror
+        assert prover.run()
+        assert rows_of(prover) == case.front
+        if mirror_holds(case.compiled):
+            assert all(case.feasible.get(stack[::-1]) == vector for stack, vector in case.feasible.items())
+
+    def test_equal_stacks(self, case: Case) -> None:
+        values = np.array(case.front, dtype=np.int64).reshape(-1, len(case.problem.search.objectives))
+        rows, codes = equal_stacks(case.compiled, values)
+        found = list(zip(rows.tolist(), evaluate.decode(case.compiled, codes), strict=True))
+        number = {vector: row for row, vector in enumerate(case.front)}
+        expected = {(number[vector], stack) for stack, vector in case.feasible.items() if vector in number}
+        assert len(found) == len(set(found))
+        assert set(found) == expected
+
+
+@pytest.mark.parametrize("seed", [*SMALL[::10], *DEEP[:3]])
+def test_exploring_hands_over(seed: int) -> None:
+    """What exploring finds is feasible by the readable equations, and the proof ends the same with it."""
+    case = make_case(seed)
+    explorer = Explorer(Stock(case.compiled), seed, population=12)
+    explorer.step()
+    found = explorer.stock.stacks(explorer.archive.codes)
+    vectors = [tuple(vector) for vector in explorer.archive.values.tolist()]
+    assert [case.feasible[stack] for stack in found] == vectors
+    prover = start(case.compiled, found)
+    assert prover.run()
+    assert rows_of(prover) == case.front
+    check_members(case, prover)
+
+
+def test_the_problems_are_varied() -> None:
+    seen: Counter[str] = Counter()
+    for seed in SMALL:
+        problem = small_problems.draft_problem(seed)
+        rules = problem.rules
+        seen[f"depth {rules.max_sheets}"] += 1
+        seen[f"requirements {len(problem.requirements)}"] += 1
+        seen[f"objectives {len(problem.search.objectives)}"] += 1
+        seen.update({f"begins with {problem.search.objectives[0]}"})
+        seen.update({requirement.field.kind for requirement in problem.requirements})
+        seen["0 Hz"] += any(requirement.mask.frequency_hz[0] == 0.0 for requirement in problem.requirements)
+        for name in (
+            "bond", "source_side", "victim_side", "first", "last", "max_anodic_gap_v", "cost_per_sheet",
+            "max_mass_kg_per_m2", "max_cost_per_m2", "max_thickness_m",
+        ):  # fmt: skip
+            seen[name] += bool(getattr(rules, name))
+        assert 3 <= len(problem.sheets) <= 8
+    assert len(seen) == 4 + 3 + 4 + 4 + 5 + 1 + 10
+    assert min(seen.values()) >= 8, seen
+
+
+class TestMirrorImages:
+    @pytest.mark.parametrize(
+        "rules",
+        [
+            {},
+            {"bond": film(25)},
+            {"first": ("copper", "steel"), "last": ("steel", "copper")},
+            {"max_anodic_gap_v": 0.3},
+        ],
+    )
+    def test_may_be_skipped(self, rules: dict[str, object]) -> None:
+        assert mirror_holds(compile_problem(build_problem(use=["copper", "steel", "ferrite"], **rules)))
+
+    @pytest.mark.parametrize(
+        "rules",
+        [
+            {"source_side": (film(1000),)},
+            {"victim_side": (film(1000),)},
+            {"source_side": (film(1000),), "victim_side": (film(1000),)},
+            {"first": ("copper",)},
+            {"last": ("copper",)},
+            {"first": ("copper",), "last": ("steel",)},
+        ],
+    )
+    def test_must_not_be_skipped(self, rules: dict[str, object]) -> None:
+        compiled = compile_problem(build_problem(use=["copper", "steel", "ferrite"], **rules))
+        assert not mirror_holds(compiled)
+        assert not start(compiled).tables.mirror
+
+    def test_must_not_be_skipped_where_neighbours_have_an_order(self) -> None:
+        compiled = compile_problem(build_problem(use=["copper", "steel"]))
+        neighbours = compiled.rules.neighbours.copy()
+        neighbours[0, -1] = False
+        ordered = replace(compiled, rules=replace(compiled.rules, neighbours=neighbours))
+        assert mirror_holds(compiled)
+        assert not mirror_holds(ordered)
+
+    def test_a_face_rule_would_lose_a_stack(self, monkeypatch: pytest.MonkeyPatch) -> None:
+        """Steel must face the source: of copper and steel only one order is allowed, and skipping would drop it."""
+        problem = build_problem(
+            CoaxialLoops(12e-3, 5e-3, 20e-3, 25e-3),
+            masks=[Mask((1e4, 1e5), (0.0, 0.0))],
+            use=["copper", "steel"],
+            materials={
+                "copper": material("copper", 5.8e7, 8890.0, (35,), 14.0),
+                "steel": material("steel", 7e6, 7850.0, (100,), 3.0, permeability=MATERIALS["steel"].permeability),
+            },
+            max_sheets=2,
+            first=("steel",),
+            objectives=("thickness",),
+        )
+        self.check_loss(with_mask_of(problem, "steel 100um / copper 35um"), [(135_000_000,)], monkeypatch)
+
+    def test_a_fixed_layer_would_lose_a_stack(self, monkeypatch: pytest.MonkeyPatch) -> None:
+        """Two conducting films shield better with a quarter wavelength between them than on one another."""
+        problem = build_problem(
+            PlaneWave(),
+            masks=[Mask((5.9e9, 6.1e9), (0.0, 0.0))],
+            use=["coating", "plate"],
+            materials={
+                "coating": material("coating", 5e3, 2000.0, (50,), 1.0),
+                "plate": material("plate", 0.0, 2000.0, (4000,), 1.0, permittivity=10.0),
+            },
+            max_sheets=2,
+            source_side=(Sheet("coating", 50e-6),),
+            objectives=("thickness",),
+        )
+        better, worse = "plate 4mm / coating 50um", "coating 50um / plate 4mm"
+        assert level_db(problem, better) > level_db(problem, worse) + 3.0
+        self.check_loss(with_mask_of(problem, better), [(4_050_000_000,)], monkeypatch)
+
+    def check_loss(self, problem: Problem, expected: list[Vector], monkeypatch: pytest.MonkeyPatch) -> None:
+        compiled = compile_problem(problem)
+        feasible = brute_force.feasible_stacks(problem, compiled.rows.spectra)
+        assert brute_force.front_of(list(feasible.values())) == expected
+        right = start(compiled)
+        assert right.run()
+        assert rows_of(right) == expected
+        monkeypatch.setattr("stackopt.prove.mirror_holds", lambda _: True)
+        wrong = start(compiled)
+        assert wrong.run()
+        assert rows_of(wrong) == []
+
+
+def level_db(problem: Problem, text: str) -> float:
+    return float(evaluate.attenuation(problem, [text])[0].min())
+
+
+def with_mask_of(problem: Problem, text: str) -> Problem:
+    """The problem with a mask 0.01 dB below what the stack attenuates at every frequency of its mask."""
+    (requirement,) = problem.requirements
+    frequency = np.array(requirement.mask.frequency_hz)
+    level = evaluate.attenuation(problem, [text], frequency_hz=frequency)[0] - 0.01
+    mask = Mask(requirement.mask.frequency_hz, tuple(level.tolist()), points_per_decade=1)
+    return replace(problem, requirements=(replace(requirement, mask=mask),))
+
+
+class TestInterrupted:
+    @pytest.mark.parametrize("workers", [1, 2, 4])
+    def test_workers_give_the_same_rows(self, deep: Case, workers: int) -> None:
+        prover = start(deep.compiled)
+        assert prover.run(workers)
+        assert rows_of(prover) == deep.front
+
+    def test_a_past_deadline_settles_nothing(self, deep: Case) -> None:
+        prover = start(deep.compiled)
+        assert not prover.run(2, deadline=time.monotonic() - 1.0)
+        assert not prover.complete
+        assert prover.covered == 0.0
+        assert len(prover.archive) == 0
+        assert prover.run(2)
+        assert rows_of(prover) == deep.front
+
+    @pytest.mark.parametrize("workers", [1, 2])
+    def test_stopped_again_and_again(self, deep: Case, workers: int) -> None:
+        """A watcher that raises ends the proof cleanly; what is done stays done, and the end is the same."""
+        prover = start(deep.compiled)
+        shares = []
+        for _ in range(1000):
+            shares.append(prover.covered)
+            try:
+                prover.run(workers, watch=raise_after(1))
+            except Stopped:
+                continue
+            break
+        assert prover.complete
+        assert shares == sorted(shares)
+        assert len(shares) >= 2
+        assert rows_of(prover) == deep.front
+        check_members(deep, prover)
+
+    def test_continued_by_another_prover(self, deep: Case) -> None:
+        """As a resumed run does it: the shares that are done and the archive are all that is carried over."""
+        calls: list[None] = []
+        start(deep.compiled).run(1, watch=lambda: calls.append(None))
+        first = start(deep.compiled)
+        with pytest.raises(Stopped):
+            first.run(1, watch=raise_after(max(1, len(calls) // 2)))
+        assert 0.0 < first.covered < 1.0
+        second = Prover(deep.compiled, first.archive.copy(), first.tally)
+        second.done[:] = first.done
+        assert second.run(2)
+        assert rows_of(second) == deep.front
+
+    def test_the_tally_grows(self, deep: Case) -> None:
+        tally = Tally(opened=5, judged=7, seconds=1.0)
+        archive = Archive(len(deep.problem.search.objectives), deep.compiled.rules.max_sheets)
+        Prover(deep.compiled, archive, tally).run()
+        assert tally.opened > 5
+        assert tally.judged > 7
+        assert tally.seconds > 1.0
+
+
+class Stopped(Exception):  # noqa: N818 - the name says what happened
+    pass
+
+
+def raise_after(calls: int) -> Callable[[], None]:
+    left = [calls]
+
+    def watch() -> None:
+        left[0] -= 1
+        if left[0] == 0:
+            raise Stopped
+
+    return watch
+
+
+class TestWhyNotProvable:
+    @pytest.mark.parametrize(
+        "objectives", [("mass",), ("sheets",), ("thickness", "cost"), ("sheets", "mass", "cost", "thickness")]
+    )
+    def test_provable(self, objectives: tuple[str, ...]) -> None:
+        assert why_not_provable(build_problem(objectives=objectives)) is None
+
+    def test_margin(self) -> None:
+        assert why_not_provable(build_problem(objectives=("mass", "margin"))) == (
+            "the objective margin does not only grow with every sheet, so the front can be explored, not proved"
+        )
+
+    def test_thickness_range(self) -> None:
+        plate = replace(MATERIALS["aluminium"], name="plate", gauges_m=(), thickness_range_m=(1e-4, 2e-3))
+        held = MATERIALS | {"plate": plate}
+        problem = build_problem(materials=held, use=["copper", "plate"])
+        assert why_not_provable(problem) == (
+            "plate: a thickness_range allows endless thicknesses, so the front can be explored, not proved"
+        )
+        assert why_not_provable(replace(problem, use=("copper",))) is None

@@ -58,8 +58,8 @@ class Archive:
         """Whether a member is no worse in every objective than each of the vectors, and better in one; see `covers`."""
         return _strictly_covered(values, self.values)
 
-    def add(self, values: Integers, codes: Integers) -> int:
-        """Add feasible stacks; return how many objective vectors the archive gained.
+    def add(self, values: Integers, codes: Integers) -> None:
+        """Add feasible stacks.
 
         Parameters
         ----------
@@ -69,8 +69,7 @@ class Archive:
         worth = ~_strictly_covered(values, self.values)
         values, codes = values[worth], codes[worth]
         if len(values) == 0:
-            return 0
-        gained = len(np.unique(values[~_covered(values, self.values)], axis=0))
+            return
         merged = np.concatenate([self.values, values])
         stacks = np.concatenate([self.codes, codes])
         order = np.lexsort((*stacks.T[::-1], *merged.T[::-1]))
@@ -79,7 +78,6 @@ class Archive:
         merged, stacks = merged[distinct], stacks[distinct]
         keep = non_dominated(merged)
         self.values, self.codes = merged[keep], stacks[keep]
-        return gained
 
 
 def non_dominated(values: Integers) -> Booleans:

@@ -1,8 +1,8 @@
 """From a Problem to read-only tables on (sheet, frequency, line): all that a search evaluates again and again.
 
-Rows are the pairs (requirement, frequency) of all requirements, one after the other, and lines the spectral lines of all
-rows, one after the other. Objectives are integers (nanograms and micro-units of currency per m^2, picometres), so that
-sums do not depend on the order of the sheets.
+Rows are the pairs (requirement, frequency) of all requirements, one after the other, and lines the spectral lines of
+all rows, one after the other. Objectives are integers (nanograms and micro-units of currency per m^2, picometres), so
+that sums do not depend on the order of the sheets.
 """
 
 from __future__ import annotations
@@ -406,7 +406,8 @@ def _rules(problem: Problem, sheets: Stack) -> Rules:
         return np.array(good, dtype=bool)[of_sheet]
 
     apart = rules.bond is not None and problem.materials[rules.bond.material].conductivity_s_per_m < 1.0
-    touching = np.array([[apart or _may_touch(problem, a, b) for b in names] for a in names], dtype=bool)
+    pairs = [apart or _may_touch(problem, a, b) for a in names for b in names]
+    touching = np.array(pairs, dtype=bool).reshape(len(names), len(names))
     return _read_only(
         Rules(
             max_sheets=rules.max_sheets,

@@ -100,11 +100,11 @@ class Cover(NamedTuple):
     """int64 (2,), a step being 2**shift."""
 
 
-# The helpers are inlined and take plain arrays: passing the tuples on, or choosing between two arrays, would count
-# references in every step, which costs more than the arithmetic and stalls threads that share the tables.
+# The helpers take plain arrays: passing the tuples on, or choosing between two arrays, would count references in every
+# step, which costs more than the arithmetic and stalls threads that share the tables.
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _is_covered(least, shift, used, a, b, c, sheets):  # type: ignore[no-untyped-def]
     level = min(sheets, least.shape[0] - 1)
     i = min((a * used[0]) >> shift[0], CELLS - 1)
@@ -122,7 +122,7 @@ def _add_to_cover(least, shift, used, a, b, c, sheets):  # type: ignore[no-untyp
                 least[level, i, j] = min(least[level, i, j], c * used[2])
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _add_sheet(sums, path, totals, valid, depth, sheet):  # type: ignore[no-untyped-def]
     path[depth] = sheet
     for axis in range(3):
@@ -131,7 +131,7 @@ def _add_sheet(sums, path, totals, valid, depth, sheet):  # type: ignore[no-unty
         valid[depth + 1, row] = 0
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _choose_children(  # type: ignore[no-untyped-def]
     sums, limits, used, may_first, may_last, may_touch, mirror, least, shift,
     path, totals, usable, usable_count, alive, fate, depth,
@@ -160,7 +160,7 @@ def _choose_children(  # type: ignore[no-untyped-def]
     return judged
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _bring_up(table, bonded, scale, row_block, path, state, scales, valid, depth, row):  # type: ignore[no-untyped-def]
     """Compute the row vectors of a row up to the prefix of the given depth."""
     blocks = row_block[-1]
@@ -176,7 +176,7 @@ def _bring_up(table, bonded, scale, row_block, path, state, scales, valid, depth
         valid[d + 1, row] = 1
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _judge_row(  # type: ignore[no-untyped-def]
     sums, thickness_axis, closing, bonded, scale, row_block, coefficients, highest, reach, thickest, required,
     totals, state, scales, alive, total, depth, row, judged,
@@ -212,7 +212,7 @@ def _judge_row(  # type: ignore[no-untyped-def]
     return surviving
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _list_branches(usable, usable_count, branch, branch_count, fate, depth):  # type: ignore[no-untyped-def]
     """List the children to go into, and drop the settled ones from what may be used below."""
     kept = 0
@@ -230,7 +230,7 @@ def _list_branches(usable, usable_count, branch, branch_count, fate, depth):  # 
     branch_count[depth] = branches
 
 
-@njit(cache=True, nogil=True, inline="always")
+@njit(cache=True, nogil=True)
 def _next_node(  # type: ignore[no-untyped-def]
     sums, used, least, shift, path, totals, valid, usable, usable_count, branch, branch_count, depth, base
 ):

@@ -177,8 +177,6 @@ def attenuation(
         stack = tuple(sheet if isinstance(sheet, Sheet) else Sheet(*sheet) for sheet in given)
         for sheet in stack:
             if sheet.material not in problem.materials or not sheet.thickness_m > 0.0:
-                raise InputError(
-                    f"{sheet.material!r}, {sheet.thickness_m} m: not a material of the problem at a thickness above 0"
-                )
+                raise InputError(f"{sheet}: needs a material of the problem and a thickness above 0 um")
         result[number] = fields.attenuation_db(lines, media(problem, with_bonds(problem, stack), grid), source, victim)
     return result

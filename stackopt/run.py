@@ -13,7 +13,7 @@ import threading
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
@@ -197,6 +197,8 @@ class _Run:
                 ) from None
             self._save()
         self.watcher(Status("writing", front_size=len(front)))
+        if self.task.prover is not None and not self.task.prover.complete:
+            front = replace(front, statement=f"{front.statement} Go on with: stackopt prove {self.folder}")
         self._write_results(front)
         return RunResult(front, self.folder)
 

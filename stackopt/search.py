@@ -2,8 +2,8 @@
 
 A round works on a grid of frequencies and a quadrature. Confirming judges the front on a grid ten times denser with a
 finer quadrature; where a stack fails, its worst frequency joins the grid of the next round (or, if it is in the grid
-already, the quadrature is refined). Fewer frequencies only relax the problem, so a proved front whose stacks all pass is
-the complete front of the dense grid too.
+already, the quadrature is refined). Fewer frequencies only relax the problem, so a proved front whose stacks all pass
+is the complete front of the dense grid too.
 """
 
 from __future__ import annotations
@@ -207,7 +207,10 @@ class Search:
         started, judged_before, covered_before = time.monotonic(), prover.tally.judged, prover.covered
 
         def watch() -> None:
-            elapsed = max(time.monotonic() - started, 1e-9)
+            elapsed = time.monotonic() - started
+            if elapsed < 1.0:  # too early to tell a rate
+                watcher(self._status("proving", prover.covered, "", None))
+                return
             gained = prover.covered - covered_before
             left = elapsed * (1.0 - prover.covered) / gained if gained > 0.0 else None
             rate = (prover.tally.judged - judged_before) / elapsed
@@ -300,8 +303,8 @@ class Search:
             return f"No stack meets the mask: proved over {number:.3g} stacks. {self._nearest()}"
         if complete:
             return (
-                f"Complete: all {number:.3g} stacks that the sheets can form are settled, none is missing from the "
-                f"front, and every stack of it holds on a grid {DENSITY} times denser."
+                f"Complete: all {number:.3g} stacks that the sheets can form, rules aside, are settled, none is missing "
+                f"from the front, and every stack of it holds on a grid {DENSITY} times denser."
             )
         if self.obstacle is not None:
             settled = f"Explored, not proved: {self.obstacle}."

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -111,3 +112,8 @@ def media_of(layers: Sequence[Layer], frequency_hz: Real) -> list[tuple[Medium, 
 def film(thickness_um: float) -> Sheet:
     """A film of the given thickness in micrometres."""
     return Sheet("film", thickness_um * 1e-6)
+
+
+def ranged(name: str, like: str, low_m: float, high_m: float) -> Material:
+    """A material like one of `MATERIALS` that comes in any thickness of a range instead of gauges."""
+    return replace(MATERIALS[like], name=name, gauges_m=(), thickness_range_m=(low_m, high_m))

@@ -49,37 +49,46 @@ def dipole_impedance(frequency: Number, distance: Number) -> Number:
     return ETA_0**2 / loop_impedance(frequency, distance)
 
 
-def matrix(layers: Sequence[Layer], k: Number, frequency: Number, polarisation: str = "TE") -> Any:
-    """Chain matrix of the layers in ohm and siemens; frequency above 0."""
-    jw = 2j * mp.pi * mp.mpf(frequency)
-    total = mp.eye(2)
-    for mu, sigma, eps, thickness in layers:
-        admittivity = mp.mpf(sigma) + jw * EPSILON_0 * mp.mpf(eps)
-        series = jw * MU_0 * mp.mpmathify(mu)
-        u = root(k**2 + series * admittivity)
-        impedance = series / u if polarisation == "TE" else u / admittivity
-        grown = mp.exp(u * mp.mpf(thickness))
-        cosh, sinh = (grown + 1 / grown) / 2, (grown - 1 / grown) / 2  # thirty digits can spare a few
-        total = total * mp.matrix([[cosh, impedance * sinh], [sinh / impedance, cosh]])
-    return total
+Matrix = tuple[Number, Number, Number, Number]
+
+
+def product(one: Matrix, other: Matrix) -> Matrix:
+    """Of two chain matrices (A, B, C, D)."""
+    a, b, c, d = one
+    e, f, g, h = other
+    return a * e + b * g, a * f + b * h, c * e + d * g, c * f + d * h
+
+
+def line_section(x: Number, impedance: Number) -> Matrix:
+    """Chain matrix of a line of the length x = u d."""
+    grown = mp.exp(x)
+    cosh, sinh = (grown + 1 / grown) / 2, (grown - 1 / grown) / 2  # thirty digits can spare a few
+    return cosh, impedance * sinh, sinh / impedance, cosh
 
 
 def transmission(
     layers: Sequence[Layer], k: Number, frequency: Number, terminal: Number, polarisation: str = "TE"
 ) -> Number:
-    """T between equal terminal impedances (ohm)."""
-    chain = matrix(layers, k, frequency, polarisation)
-    return 2 / (chain[0, 0] + chain[0, 1] / terminal + chain[1, 0] * terminal + chain[1, 1])
+    """T between equal terminal impedances (ohm); frequency above 0."""
+    jw = 2j * mp.pi * mp.mpf(frequency)
+    total: Matrix = (mp.mpf(1), mp.mpf(0), mp.mpf(0), mp.mpf(1))
+    for mu, sigma, eps, thickness in layers:
+        admittivity = mp.mpf(sigma) + jw * EPSILON_0 * mp.mpf(eps)
+        series = jw * MU_0 * mp.mpmathify(mu)
+        u = root(k**2 + series * admittivity)
+        impedance = series / u if polarisation == "TE" else u / admittivity
+        total = product(total, line_section(u * mp.mpf(thickness), impedance))
+    a, b, c, d = total
+    return 2 / (a + b / terminal + c * terminal + d)
 
 
 def static_transmission(layers: Sequence[Layer], k: Number) -> Number:
     """T of a static magnetic field of transverse wavenumber k: scalar potential and normal flux across each layer."""
-    total = mp.eye(2)
+    total: Matrix = (mp.mpf(1), mp.mpf(0), mp.mpf(0), mp.mpf(1))
     for mu, _, _, thickness in layers:
-        x, slope = k * mp.mpf(thickness), mp.mpmathify(mu) * k
-        cosh, sinh = mp.cosh(x), mp.sinh(x)
-        total = total * mp.matrix([[cosh, sinh / slope], [slope * sinh, cosh]])
-    return 2 / (total[0, 0] + total[0, 1] * k + total[1, 0] / k + total[1, 1])
+        total = product(total, line_section(k * mp.mpf(thickness), 1 / (mp.mpmathify(mu) * k)))
+    a, b, c, d = total
+    return 2 / (a + b * k + c / k + d)
 
 
 def loss_db(shielded: Number, unshielded: Number = 1) -> float:

@@ -9,6 +9,7 @@ import time
 from collections import Counter
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from functools import cache
 
 import brute_force
 import numpy as np
@@ -50,14 +51,17 @@ def make_case(seed: int) -> Case:
     return Case(problem, compiled, feasible, brute_force.front_of(list(feasible.values())))
 
 
+deep_case = cache(make_case)
+
+
 @pytest.fixture(scope="module", params=[*SMALL, *DEEP])
 def case(request: pytest.FixtureRequest) -> Case:
-    return make_case(request.param)
+    return deep_case(request.param) if request.param in DEEP else make_case(request.param)
 
 
 @pytest.fixture(scope="module", params=DEEP)
 def deep(request: pytest.FixtureRequest) -> Case:
-    return make_case(request.param)
+    return deep_case(request.param)
 
 
 def start(compiled: CompiledProblem, stacks: list[Stack] | None = None) -> Prover:

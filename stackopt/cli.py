@@ -78,6 +78,10 @@ Outside = Annotated[
 ]
 Plot = Annotated[Path | None, typer.Option(metavar="FILE", help="Draw the curves (.png, .svg or .pdf).")]
 Hours = Annotated[float | None, typer.Option(metavar="H", help="Stop after H hours; the run can go on later.")]
+Within = Annotated[
+    str | None,
+    typer.Option(metavar="SHARE", help="Also list every stack that is within this share of the front, such as 5%."),
+]
 Workers = Annotated[int | None, typer.Option(metavar="N", help="Processor cores for the proof; all if left out.")]
 
 
@@ -177,6 +181,7 @@ def search(
         Path | None, typer.Option(metavar="FOLDER", help="New folder for the run; results/<problem>-<n> if left out.")
     ] = None,
     resume: Annotated[Path | None, typer.Option(metavar="RUN", help="Go on with an interrupted run.")] = None,
+    within: Within = None,
     allow_outside: Outside = False,
 ) -> None:
     """Find the stacks that meet the mask and that none other beats.
@@ -188,14 +193,22 @@ def search(
     from stackopt.outputs.progress import TerminalProgress
     from stackopt.run import RunOptions, search_run
 
-    options = RunOptions(hours=hours, workers=workers, seed=seed, out=out, resume=resume, allow_outside=allow_outside)
+    options = RunOptions(
+        hours=hours,
+        workers=workers,
+        seed=seed,
+        out=out,
+        resume=resume,
+        allow_outside=allow_outside,
+        within=_share(within),
+    )
     with TerminalProgress() as watcher:
         result = search_run(problem, options, watcher)
     _show_result(result)
 
 
 @app.command()
-def prove(run: RunFolder, hours: Hours = None, workers: Workers = None) -> None:
+def prove(run: RunFolder, hours: Hours = None, workers: Workers = None, within: Within = None) -> None:
     """Go on with the proof that the front of a run is complete.
 
     The front is all the stacks that meet the mask and that none other beats.
@@ -205,7 +218,7 @@ def prove(run: RunFolder, hours: Hours = None, workers: Workers = None) -> None:
     from stackopt.run import RunOptions, prove_run
 
     with TerminalProgress() as watcher:
-        result = prove_run(run, RunOptions(hours=hours, workers=workers), watcher)
+        result = prove_run(run, RunOptions(hours=hours, workers=workers, within=_share(within)), watcher)
     _show_result(result)
 
 
@@ -290,6 +303,21 @@ def _refuse(*findings: Finding | None) -> None:
     wrong = [finding for finding in findings if finding is not None]
     if wrong:
         raise InputError(wrong)
+
+
+def _share(within: str | None) -> float | None:
+    """Read ``--within``: 0 % or more, and less than all."""
+    from stackopt.units import parse_quantity
+
+    if within is None:
+        return None
+    try:
+        share = parse_quantity(within, "ratio")
+    except ValueError as error:
+        raise InputError(Finding("", "--within", str(error))) from None
+    if not 0.0 <= share <= 1.0:
+        raise InputError(Finding("", "--within", f"found {within}; write a share from 0 % to 100 %, such as 5%"))
+    return share
 
 
 def _wrong_hours(hours: float | None) -> Finding | None:

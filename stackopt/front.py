@@ -72,6 +72,8 @@ class Front:
         One sentence for the user about how far the front can be trusted.
     equals : tuple of (int, FrontRow)
         Other stacks that reach exactly the objectives of a row, as (rank, row); ranks count from 1.
+    alternatives : tuple of FrontRow, optional
+        Where asked for: all feasible stacks that no member of the front beats by more than the asked factor.
     """
 
     problem: Problem
@@ -79,6 +81,7 @@ class Front:
     complete: bool = False
     statement: str = ""
     equals: tuple[tuple[int, FrontRow], ...] = ()
+    alternatives: tuple[FrontRow, ...] | None = None
 
     def __len__(self) -> int:
         return len(self.rows)

@@ -51,6 +51,7 @@ class Material:
     price_per_kg: float | None = None
     price_per_m2: tuple[tuple[float, float], ...] = ()
     saturation_t: float | None = None
+    rayleigh_m_per_a: float | None = None
     anodic_index_v: float | None = None
     tolerance: Tolerance = Tolerance()
     notes: str = ""
@@ -225,12 +226,30 @@ class Mask:
 
 
 @dataclass(frozen=True)
+class Drive:
+    """What feeds the source of coaxial loops or dipoles, and what it may do to the stack and to the source itself.
+
+    ``points`` are (frequency in Hz, peak): ampere-turns for loops, A m^2 for dipoles. ``saturation_fraction`` is the
+    largest peak flux density in a layer over the saturation of its material. Limits of None are absent; the limit on the
+    relative change of inductance needs the source's turns and inductance.
+    """
+
+    points: tuple[tuple[float, float], ...]
+    saturation_fraction: float = 0.5
+    max_heat_w: float | None = None
+    max_inductance_change: float | None = None
+    source_turns: float | None = None
+    source_inductance_h: float | None = None
+
+
+@dataclass(frozen=True)
 class Requirement:
-    """One field with its mask."""
+    """One field with its mask, and what drives it where that is known."""
 
     name: str
     field: Field
     mask: Mask
+    drive: Drive | None = None
 
 
 @dataclass(frozen=True)
@@ -252,11 +271,17 @@ class StackRules:
 
 @dataclass(frozen=True)
 class SearchSettings:
-    """How to search: objectives in the user's order, the seed and the population."""
+    """How to search: objectives in the user's order, the seed and the population.
+
+    ``assume`` says for which values of the materials the mask must be met: "nominal", "worst" (every corner of the
+    tolerances) or "yield" (with the probability ``yield_goal``).
+    """
 
     objectives: tuple[str, ...] = ("mass", "cost", "thickness")
     random_seed: int = 1
     population: int = 200
+    assume: str = "nominal"
+    yield_goal: float = 0.95
 
 
 @dataclass(frozen=True)

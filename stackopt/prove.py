@@ -86,6 +86,9 @@ class Prover:
         Added to.
     """
 
+    keep_all = False
+    room = ROOM
+
     def __init__(self, compiled: CompiledProblem, archive: Archive, tally: Tally | None = None) -> None:
         self.compiled, self.archive = compiled, archive
         self.tally = Tally() if tally is None else tally
@@ -103,6 +106,11 @@ class Prover:
     def covered(self) -> float:
         """Share of the stacks that is settled, 0 to 1."""
         return float(np.mean(self.done))
+
+    def warm(self) -> None:
+        """Compile the descent; seconds on a fresh machine, nothing later."""
+        stop = np.ones(1, dtype=np.uint8)
+        self.tables.descend((), stop, self._cover(), np.zeros(2, dtype=np.int64))
 
     def run(
         self, workers: int = 1, deadline: float = np.inf, watch: Callable[[], None] = lambda: None, every_s: float = 0.2
@@ -170,7 +178,7 @@ class Prover:
     def _descend(self, number: int, stop: NDArray[np.uint8]) -> _Outcome:
         cover = self._cover()
         counters = np.zeros(2, dtype=np.int64)
-        found, finished = self.tables.descend(self.shares[number], stop, cover, counters)
+        found, finished = self.tables.descend(self.shares[number], stop, cover, counters, self.keep_all, self.room)
         return _Outcome(found, finished, counters)
 
     def _cover(self) -> descent.Cover:
@@ -190,6 +198,55 @@ class Prover:
         self.tally.opened += int(outcome.counters[0])
         self.tally.judged += int(outcome.counters[1])
         self.done[number] = outcome.finished
+
+
+class Collector(Prover):
+    """A search for every feasible stack that no front member beats by more than a factor in all objectives at once.
+
+    Parameters
+    ----------
+    compiled : CompiledProblem
+    values : int64, shape (row, objective)
+        Objectives of the front.
+    within : float
+        The factor less one: 0.05 for 5 %.
+    most : int
+        Largest number of stacks to collect from any share; with more, ``overflowed`` is set.
+    """
+
+    keep_all = True
+
+    def __init__(self, compiled: CompiledProblem, values: Integers, within: float, most: int = 200_000) -> None:
+        # A stack is beaten where it is above a member's stretched objectives in all of them.
+        stretched = Archive(values.shape[1], compiled.rules.max_sheets)
+        bound = np.floor(values * (1.0 + within)).astype(np.int64) + 1
+        stretched.add(bound, np.zeros((len(values), compiled.rules.max_sheets), dtype=np.int64))
+        super().__init__(compiled, stretched)
+        self.room = most
+        self.overflowed = False
+        self._parts: list[Integers] = [np.empty((0, compiled.rules.max_sheets), dtype=np.int64)]
+
+    @property
+    def codes(self) -> Integers:
+        """Codes of the stacks found, mirror images included, each once."""
+        return np.unique(np.concatenate(self._parts), axis=0)
+
+    def _merge(self, number: int, outcome: _Outcome) -> None:
+        self.tally.opened += int(outcome.counters[0])
+        self.tally.judged += int(outcome.counters[1])
+        self.overflowed |= len(outcome.found) == self.room
+        self.done[number] = outcome.finished or len(outcome.found) == self.room
+        if not self.done[number] or len(outcome.found) == 0:
+            return
+        codes = np.concatenate([outcome.found, mirrored(outcome.found)]) if self.tables.mirror else outcome.found
+        totals = evaluate.sums(self.compiled, codes)
+        values = evaluate.objective_values(self.compiled, codes, totals, np.zeros(len(codes)))
+        self._parts.append(codes[~self.archive.covers(values)])
+
+
+def mirrored(codes: Integers) -> Integers:
+    """Codes of the mirror images, packed from the source side."""
+    return evaluate.packed(codes[:, ::-1])
 
 
 @dataclass(frozen=True)

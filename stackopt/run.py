@@ -23,7 +23,7 @@ from stackopt.errors import Finding, InputError, InterruptedRunError, RunError
 from stackopt.front import Front
 from stackopt.outputs.files import write_whole
 from stackopt.outputs.plots import write_trade_off
-from stackopt.outputs.tables import write_equals, write_front
+from stackopt.outputs.tables import write_alternatives, write_equals, write_front
 from stackopt.problem import Problem
 from stackopt.readers import read_problem
 from stackopt.search import Search
@@ -51,6 +51,8 @@ class RunOptions:
         Run to go on with.
     allow_outside : bool
         Whether tables may be read from outside the problem's and the set's folders.
+    within : float, optional
+        List the alternatives within this factor (less one) of the front.
     """
 
     hours: float | None = None
@@ -59,6 +61,7 @@ class RunOptions:
     out: Path | None = None
     resume: Path | None = None
     allow_outside: bool = False
+    within: float | None = None
 
 
 @dataclass(frozen=True)
@@ -189,7 +192,10 @@ class _Run:
                     raise _Stop
 
             try:
-                front = self.task.run(watch, _deadline(options.hours), self._save_now_and_then)
+                deadline = _deadline(options.hours)
+                front = self.task.run(watch, deadline, self._save_now_and_then)
+                if options.within is not None:
+                    front = self.task.alternatives(front, options.within, watch, deadline)
             except _Stop:
                 self._save()
                 raise InterruptedRunError(
@@ -214,6 +220,8 @@ class _Run:
     def _write_results(self, front: Front) -> None:
         write_front(front, self.folder / "front.csv")
         write_equals(front, self.folder / "front_equals.csv")
+        if front.alternatives is not None:
+            write_alternatives(front, self.folder / "alternatives.csv")
         if len(front):
             write_trade_off(front, self.folder / "trade_off.png")
         self._write_record(front)

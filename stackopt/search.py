@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -22,7 +22,7 @@ from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_U
 from stackopt.explore import Explorer
 from stackopt.front import Front, FrontRow
 from stackopt.problem import Problem, Stack
-from stackopt.prove import Prover, Tally, count_stacks, why_not_provable
+from stackopt.prove import Collector, Prover, Tally, count_stacks, why_not_provable
 from stackopt.scout import scout
 from stackopt.status import Status, Watcher
 from stackopt.stock import Stock
@@ -39,10 +39,11 @@ MAX_ROUNDS = 60
 
 @dataclass(frozen=True)
 class _Confirmed:
-    """Stacks of a front judged on the dense grid: row of each, margin, and where it is tightest."""
+    """Stacks judged on the dense grid: the front's row of each, its sums, its margin, and where that is tightest."""
 
     rows: Integers
     stacks: list[Stack]
+    totals: Integers
     margin_db: NDArray[np.float64]
     frequency_hz: NDArray[np.float64]
     requirement: Integers
@@ -204,6 +205,8 @@ class Search:
         if self.obstacle is not None:
             return
         prover = self.prover or self._begin_proof()
+        watcher(self._status("preparing the proof (compiles once on a fresh machine)", None, "", None))
+        prover.warm()
         started, judged_before, covered_before = time.monotonic(), prover.tally.judged, prover.covered
 
         def watch() -> None:
@@ -236,18 +239,52 @@ class Search:
                 best[name] = _objective_text(name, int(self.archive.values[:, column].min()), self.problem.currency)
         return Status(phase, fraction, rate, len(self.archive), best, left)
 
+    def alternatives(self, front: Front, within: float, watcher: Watcher, deadline: float = np.inf) -> Front:
+        """Add to a complete front every feasible stack that no member beats by more than a factor in all objectives.
+
+        Parameters
+        ----------
+        front : Front
+            The result of `run`.
+        within : float
+            The factor less one: 0.05 for 5 %.
+        """
+        if self.obstacle is not None or not len(front):
+            return replace(front, statement=f"{front.statement} No alternatives without a proved front.")
+        collector = Collector(self.compiled, self.archive.values, within)
+        collector.run(
+            self.workers,
+            deadline,
+            lambda: watcher(self._status("collecting alternatives", collector.covered, "", None)),
+        )
+        judged = self._judge_densely(evaluate.decode(self.compiled, collector.codes))
+        rows = [self._row(judged, n) for n in np.flatnonzero(judged.margin_db >= -MARGIN_SLACK_DB).tolist()]
+        rows.sort(key=lambda row: [row.objective(name) for name in self.problem.search.objectives])
+        whole = collector.complete and not collector.overflowed and front.complete
+        share = f"{100.0 * within:g} %"
+        words = f"{len(rows)} stacks are within {share} of the front; " + (
+            "none is missing." if whole else "there may be more."
+        )
+        return replace(front, alternatives=tuple(rows), statement=f"{front.statement} {words}")
+
     # Confirmation -----------------------------------------------------------------------------------------------------
 
     def _confirm(self) -> _Confirmed:
         """Judge every stack that reaches the objectives of the front on the dense grid."""
         rows, stacks = self._candidates()
+        return replace(self._judge_densely(stacks), rows=rows)
+
+    def _judge_densely(self, stacks: list[Stack]) -> _Confirmed:
+        none = np.empty(0, dtype=np.int64)
         if not stacks:
-            nothing = np.empty(0)
-            return _Confirmed(rows, [], nothing, nothing, rows)
+            return _Confirmed(none, [], none, np.empty(0), np.empty(0), none)
         sheets = tuple(dict.fromkeys(sheet for stack in stacks for sheet in stack))
         dense = compile_problem(self.problem, sheets, DENSITY, self.error_db / 10.0, self.extra_hz)
-        margin, row = evaluate.margins(dense, evaluate.encode(dense, stacks))
-        return _Confirmed(rows, stacks, margin, dense.rows.frequency_hz[row], dense.rows.requirement[row])
+        codes = evaluate.encode(dense, stacks)
+        totals = evaluate.sums(dense, codes)
+        margin, row = evaluate.margins(dense, codes, totals)
+        where, which = dense.rows.frequency_hz[row], dense.rows.requirement[row]
+        return _Confirmed(none, stacks, totals, margin, where, which)
 
     def _candidates(self) -> tuple[Integers, list[Stack]]:
         if self.obstacle is not None:
@@ -284,8 +321,7 @@ class Search:
 
     def _row(self, confirmed: _Confirmed, n: int) -> FrontRow:
         stack = confirmed.stacks[n]
-        compiled = self.compiled.with_sheets(tuple(dict.fromkeys(stack)))
-        mass, cost, thickness = evaluate.sums(compiled, evaluate.encode(compiled, [stack]))[0]
+        mass, cost, thickness = confirmed.totals[n]
         priced = all(self.problem.materials[s.material].price(s.thickness_m) is not None for s in stack)
         return FrontRow(
             stack=stack,
@@ -303,8 +339,8 @@ class Search:
             return f"No stack meets the mask: proved over {number:.3g} stacks. {self._nearest()}"
         if complete:
             return (
-                f"Complete: all {number:.3g} stacks that the sheets can form, rules aside, are settled, none is missing "
-                f"from the front, and every stack of it holds on a grid {DENSITY} times denser."
+                f"Complete: all {number:.3g} stacks that the sheets can form, rules aside, are settled; none is missing, and "
+                f"every stack of the front holds on a grid {DENSITY} times denser."
             )
         if self.obstacle is not None:
             settled = f"Explored, not proved: {self.obstacle}."

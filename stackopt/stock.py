@@ -81,11 +81,12 @@ class Stock:
         codes = np.take_along_axis(codes, order, axis=1)
         if self.choices == self.gauges:
             return np.concatenate([codes, np.zeros_like(codes)], axis=1)
-        thickness = np.take_along_axis(thickness, order, axis=1)
         low, high = self.ranges_pm[codes, 0], self.ranges_pm[codes, 1]
+        thickness = np.clip(np.take_along_axis(thickness, order, axis=1), low, high)
         digits = 10 ** np.maximum(np.floor(np.log10(np.maximum(thickness, 1))) - 2, 0).astype(np.int64)
-        rounded = np.round(thickness / digits).astype(np.int64) * digits
-        return np.concatenate([codes, np.clip(rounded, low, high)], axis=1)
+        rounded = np.clip(np.round(thickness / digits).astype(np.int64) * digits, low, high)
+        at_end = (thickness == low) | (thickness == high)  # ends of a range may have more digits
+        return np.concatenate([codes, np.where(at_end, thickness, rounded)], axis=1)
 
     def stacks(self, genes: Integers) -> list[Stack]:
         """Stacks of genes."""

@@ -55,6 +55,17 @@ def write_equals(front: Front, path: str | os.PathLike[str]) -> None:
     _write_frame(frame, path)
 
 
+def write_alternatives(front: Front, path: str | os.PathLike[str]) -> None:
+    """Write alternatives.csv: the columns of front.csv, one row for each alternative.
+
+    Raises
+    ------
+    InputError
+        When the file cannot be written.
+    """
+    _write_frame(rows_to_frame(front.alternatives or ()), path)
+
+
 def write_predictions(predictions: Sequence[Prediction], path: str | os.PathLike[str]) -> None:
     """Write the table of `prediction_frame` as CSV, full precision, UTF-8, whole or not at all.
 

@@ -6,6 +6,7 @@
      |- InputError                2   a file, an option or a stack text is wrong
      |   `- RunError              2   a run folder cannot be used
      |- UnmetMaskError            1   the answer is no: no stack meets the mask
+     |- NothingLeftError          1   the answer is no: the filters leave no stack of a front
      `- InterruptedRunError       130 stopped by the user, a checkpoint is written
 """
 
@@ -55,6 +56,12 @@ class RunError(InputError):
 
 class UnmetMaskError(StackoptError):
     """No stack the problem allows meets the mask."""
+
+    exit_code = 1
+
+
+class NothingLeftError(StackoptError):
+    """The filters of a choice leave no stack of the front."""
 
     exit_code = 1
 

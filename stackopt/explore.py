@@ -254,7 +254,8 @@ class Explorer:
             for island in range(len(self.populations))
         ]
         before = self.archive.values
-        for island, result in enumerate(mapper(run_island, tasks)):
+        # All islands first: none may see what another brings to the archive.
+        for island, result in enumerate(list(mapper(run_island, tasks))):
             self.populations[island] = result.population
             self.archive.add(result.archive.values, result.archive.codes)
             self.computed += result.computed
@@ -264,11 +265,15 @@ class Explorer:
 
     def polish(self) -> None:
         """Try every local move of every archive member, then moves of two positions at once, until nothing improves."""
-        for moves, tried in ((neighbours, self._polished), (self._pairs, self._polished_pairs)):
-            while fresh := [genes for genes in self.archive.codes if genes.tobytes() not in tried]:
-                for genes in fresh:
-                    tried.add(genes.tobytes())
-                    self.computed += record(self.stock, self.archive, moves(self.stock, genes)).computed
+        kinds = ((neighbours, self._polished), (self._pairs, self._polished_pairs))
+        while work := next(((moves, tried, fresh) for moves, tried in kinds if (fresh := self._untried(tried))), None):
+            moves, tried, fresh = work
+            for genes in fresh:
+                tried.add(genes.tobytes())
+                self.computed += record(self.stock, self.archive, moves(self.stock, genes)).computed
+
+    def _untried(self, tried: set[bytes]) -> list[Integers]:
+        return [genes for genes in self.archive.codes if genes.tobytes() not in tried]
 
     def _pairs(self, stock: Stock, genes: Integers) -> Integers:
         return pair_neighbours(stock, genes, np.random.default_rng((self.seed, *genes.tolist())))
@@ -292,7 +297,8 @@ class Explorer:
         self.archive.values, self.archive.codes = state["values"], state["codes"]
         self.populations = list(state["populations"])
         self.seed, self.epoch, self.quiet, self.computed = (int(value) for value in state["counters"])
-        self._polished = {genes.tobytes() for genes in self.archive.codes}
+        # The members of the first look are not polished before the first epoch.
+        self._polished = {genes.tobytes() for genes in self.archive.codes} if self.epoch else set()
         self._polished_pairs = set(self._polished)
 
     def _migrated(self, island: int) -> Integers:

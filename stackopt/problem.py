@@ -230,8 +230,8 @@ class Drive:
     """What feeds the source of coaxial loops or dipoles, and what it may do to the stack and to the source itself.
 
     ``points`` are (frequency in Hz, peak): ampere-turns for loops, A m^2 for dipoles. ``saturation_fraction`` is the
-    largest peak flux density in a layer over the saturation of its material. Limits of None are absent; the limit on the
-    relative change of inductance needs the source's turns and inductance.
+    largest peak flux density in a layer over the saturation of its material. Limits of None are absent; the limit on
+    the relative change of inductance needs the source's turns and inductance.
     """
 
     points: tuple[tuple[float, float], ...]

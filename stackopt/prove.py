@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import threading
 import time
+from collections import deque
 from collections.abc import Callable, Iterator
 from concurrent.futures import FIRST_COMPLETED, Future, ThreadPoolExecutor, wait
 from dataclasses import dataclass
@@ -20,7 +21,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
-from stackopt import evaluate
+from stackopt import demands, evaluate
 from stackopt.archive import Archive
 from stackopt.blocks import CLOSING, LANES, SHEET
 from stackopt.compiled import MARGIN_SLACK_DB, CompiledProblem
@@ -34,6 +35,9 @@ Integers = NDArray[np.int64]
 Booleans = NDArray[np.bool_]
 
 ROOM = 1 << 62
+CANDIDATES = 20_000
+"""Stacks with further demands that a share collects before they are asked about."""
+_BATCH = 64
 PREFIX = 2
 """Sheets in the prefix of a share below which everything is searched."""
 _SUMS = {"mass": 0, "cost": 1, "thickness": 2}
@@ -86,11 +90,11 @@ class Prover:
         Added to.
     """
 
-    keep_all = False
-    room = ROOM
-
     def __init__(self, compiled: CompiledProblem, archive: Archive, tally: Tally | None = None) -> None:
         self.compiled, self.archive = compiled, archive
+        # Stacks with further demands are only candidates to the descent: it must collect them and go on below them.
+        self.keep_all = bool(demands.demands_of(compiled.problem))
+        self.room = CANDIDATES if self.keep_all else ROOM
         self.tally = Tally() if tally is None else tally
         self.tables = Tables(compiled)
         self.shares = list(_shares(len(compiled.sheets), compiled.rules.max_sheets))
@@ -139,14 +143,12 @@ class Prover:
     ) -> None:
         stop = np.zeros(1, dtype=np.uint8)
         running: dict[Future[_Outcome], int] = {}
-        queue = iter(waiting)
+        queue = deque(waiting)
         with ThreadPoolExecutor(workers) as pool:
             try:
                 while True:
-                    while len(running) < 2 * workers and time.monotonic() < deadline:
-                        number = next(queue, None)
-                        if number is None:
-                            break
+                    while queue and len(running) < 2 * workers and time.monotonic() < deadline:
+                        number = queue.popleft()
                         if self._is_cut(self.shares[number]):
                             self.done[number] = True
                         else:
@@ -157,7 +159,10 @@ class Prover:
                         stop[0] = 1
                     finished, _ = wait(running, timeout=every_s, return_when=FIRST_COMPLETED)
                     for future in finished:
-                        self._merge(running.pop(future), future.result())
+                        number, outcome = running.pop(future), future.result()
+                        self._merge(number, outcome)
+                        if outcome.full and not self.done[number]:
+                            queue.appendleft(number)  # once more, knowing more
                     watch()
             finally:
                 stop[0] = 1
@@ -171,15 +176,14 @@ class Prover:
             return True
         codes = np.zeros((1, rules.max_sheets), dtype=np.int64)
         codes[0, : len(prefix)] = np.array(prefix) + 1
-        totals = evaluate.sums(self.compiled, codes)
-        values = evaluate.objective_values(self.compiled, codes, totals, np.zeros(1))
-        return bool(np.any(totals > rules.limits) or self.archive.covers(values)[0])
+        beyond = bool(np.any(evaluate.sums(self.compiled, codes) > rules.limits))
+        return beyond or bool(self.archive.covers(_values(self.compiled, codes))[0])
 
     def _descend(self, number: int, stop: NDArray[np.uint8]) -> _Outcome:
         cover = self._cover()
         counters = np.zeros(2, dtype=np.int64)
         found, finished = self.tables.descend(self.shares[number], stop, cover, counters, self.keep_all, self.room)
-        return _Outcome(found, finished, counters)
+        return _Outcome(found, finished, len(found) == self.room, counters)
 
     def _cover(self) -> descent.Cover:
         """Copy of the archive's cover, made anew only when the archive has changed."""
@@ -191,13 +195,26 @@ class Prover:
         return cover._replace(least=cover.least.copy())
 
     def _merge(self, number: int, outcome: _Outcome) -> None:
-        if len(outcome.found):
-            totals = evaluate.sums(self.compiled, outcome.found)
-            values = evaluate.objective_values(self.compiled, outcome.found, totals, np.zeros(len(outcome.found)))
-            self.archive.add(values, outcome.found)
+        gained = self._take(outcome.found)
+        if outcome.full and not gained:
+            self.room *= 4  # nothing learnt that would shorten the next try
         self.tally.opened += int(outcome.counters[0])
         self.tally.judged += int(outcome.counters[1])
         self.done[number] = outcome.finished
+
+    def _take(self, codes: Integers) -> int:
+        """Add stacks to the archive, those with further demands best first and only while nothing known covers them."""
+        values = _values(self.compiled, codes)
+        if not self.keep_all:
+            return self.archive.add(values, codes)
+        gained = 0
+        order = np.argsort(values.sum(axis=1), kind="stable")
+        for start in range(0, len(order), _BATCH):
+            batch = order[start : start + _BATCH]
+            batch = batch[~self.archive.covers(values[batch])]
+            batch = batch[demands.met(self.compiled, codes[batch])]
+            gained += self.archive.add(values[batch], codes[batch])
+        return gained
 
 
 class Collector(Prover):
@@ -214,14 +231,13 @@ class Collector(Prover):
         Largest number of stacks to collect from any share; with more, ``overflowed`` is set.
     """
 
-    keep_all = True
-
     def __init__(self, compiled: CompiledProblem, values: Integers, within: float, most: int = 200_000) -> None:
         # A stack is beaten where it is above a member's stretched objectives in all of them.
         stretched = Archive(values.shape[1], compiled.rules.max_sheets)
         bound = np.floor(values * (1.0 + within)).astype(np.int64) + 1
         stretched.add(bound, np.zeros((len(values), compiled.rules.max_sheets), dtype=np.int64))
         super().__init__(compiled, stretched)
+        self.keep_all = True
         self.room = most
         self.overflowed = False
         self._parts: list[Integers] = [np.empty((0, compiled.rules.max_sheets), dtype=np.int64)]
@@ -234,14 +250,18 @@ class Collector(Prover):
     def _merge(self, number: int, outcome: _Outcome) -> None:
         self.tally.opened += int(outcome.counters[0])
         self.tally.judged += int(outcome.counters[1])
-        self.overflowed |= len(outcome.found) == self.room
-        self.done[number] = outcome.finished or len(outcome.found) == self.room
+        self.overflowed |= outcome.full
+        self.done[number] = outcome.finished or outcome.full
         if not self.done[number] or len(outcome.found) == 0:
             return
         codes = np.concatenate([outcome.found, mirrored(outcome.found)]) if self.tables.mirror else outcome.found
-        totals = evaluate.sums(self.compiled, codes)
-        values = evaluate.objective_values(self.compiled, codes, totals, np.zeros(len(codes)))
-        self._parts.append(codes[~self.archive.covers(values)])
+        codes = codes[~self.archive.covers(_values(self.compiled, codes))]
+        self._parts.append(codes[demands.met(self.compiled, codes)])
+
+
+def _values(compiled: CompiledProblem, codes: Integers) -> Integers:
+    totals = evaluate.sums(compiled, codes)
+    return evaluate.objective_values(compiled, codes, totals, np.zeros(len(codes)))
 
 
 def mirrored(codes: Integers) -> Integers:
@@ -253,6 +273,7 @@ def mirrored(codes: Integers) -> Integers:
 class _Outcome:
     found: Integers
     finished: bool
+    full: bool
     counters: Integers
 
 
@@ -371,10 +392,11 @@ def mirror_holds(compiled: CompiledProblem) -> bool:
     """Whether every stack's mirror image is as allowed and attenuates the same.
 
     Both half-spaces of every field are alike, so T is the same from either side (A + B/Z0 + C Z0 + D does not change
-    when A and D trade places). Fixed layers break that, and rules on faces or neighbours may.
+    when A and D trade places). Fixed layers break that, as does a demand on the fields inside, and rules on faces or
+    neighbours may.
     """
     rules, problem = compiled.rules, compiled.problem
-    bare = not problem.rules.source_side and not problem.rules.victim_side
+    bare = not problem.rules.source_side and not problem.rules.victim_side and not demands.faces_differ(problem)
     return bare and bool(
         np.array_equal(rules.first, rules.last) and np.array_equal(rules.neighbours, rules.neighbours.T)
     )

@@ -339,8 +339,8 @@ class Search:
             return f"No stack meets the mask: proved over {number:.3g} stacks. {self._nearest()}"
         if complete:
             return (
-                f"Complete: all {number:.3g} stacks that the sheets can form, rules aside, are settled; none is missing, and "
-                f"every stack of the front holds on a grid {DENSITY} times denser."
+                f"Complete: all {number:.3g} stacks of the sheets, rules aside, are settled; none is missing, "
+                f"and every stack of the front holds on a grid {DENSITY} times denser."
             )
         if self.obstacle is not None:
             settled = f"Explored, not proved: {self.obstacle}."

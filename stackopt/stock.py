@@ -12,7 +12,7 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from stackopt import evaluate
+from stackopt import demands, evaluate
 from stackopt.compiled import MARGIN_SLACK_DB, THICKNESS_UNIT, CompiledProblem
 from stackopt.problem import Sheet, Stack
 
@@ -22,6 +22,8 @@ Booleans = NDArray[np.bool_]
 
 
 SCREENED_DB = 20.0
+UNMET_DB = 1.0
+"""Stand-ins for the lacking margin of stacks that are known to be beaten, and of those that fail a further demand."""
 
 
 @dataclass(frozen=True)
@@ -131,4 +133,10 @@ class Stock:
             margin, _ = evaluate.margins(subset, subset_codes)
             violation[needed] = -margin - MARGIN_SLACK_DB
             values[needed] = evaluate.objective_values(subset, subset_codes, totals[needed], margin)
-        return Judged(values, violation, needed & (violation <= 0.0), int(np.count_nonzero(needed)))
+        feasible = needed & (violation <= 0.0)
+        if np.any(feasible) and demands.demands_of(compiled.problem):
+            subset, subset_codes = self.tabulated(genes[feasible])
+            failing = np.flatnonzero(feasible)[~demands.met(subset, subset_codes)]
+            feasible[failing] = False
+            violation[failing] = UNMET_DB
+        return Judged(values, violation, feasible, int(np.count_nonzero(needed)))

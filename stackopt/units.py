@@ -32,6 +32,7 @@ UNITS = {
     "area density": ("kg/m^2", '"4 kg/m^2"'),
     "flux density": ("T", '"1.5 T"'),
     "potential": ("V", '"-0.35 V"'),
+    "voltage": ("V", '"20 uV"'),
     "angle": ("rad", '"30 deg"'),
     "current": ("A", '"12 A"'),
     "power": ("W", '"2 W"'),

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stackopt.physics.media import Medium
-from stackopt.physics.permeability import ColeCole, Constant, Debye, Lorentz, Sum
+from stackopt.physics.permeability import ColeCole, Debye, Lorentz, Sum
 from stackopt.problem import (
     CoaxialLoops,
     Field,

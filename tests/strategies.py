@@ -96,15 +96,19 @@ def requirements_of_any_kind(draw: st.DrawFn) -> tuple[Field, Mask]:
 
 
 USABLE = [name for name, entry in MATERIALS.items() if entry.gauges_m]
-fixed_layers = st.lists(
-    st.builds(Sheet, st.sampled_from(["film", "steel", "aluminium", "ferrite", "lacquer"]), spread(1e-5, 5e-3)), max_size=2
-).map(tuple)
+walls = st.builds(Sheet, st.sampled_from(["film", "steel", "aluminium", "ferrite", "lacquer"]), spread(1e-5, 5e-3))
+fixed_layers = st.lists(walls, max_size=2).map(tuple)
+
+
+plane_wave_requirements = st.tuples(st.just(PlaneWave()), masks(static=False))
 
 
 @st.composite
-def problems(draw: st.DrawFn) -> Problem:
+def problems(
+    draw: st.DrawFn, requirements: st.SearchStrategy[tuple[Field, Mask]] = requirements_of_any_kind()  # noqa: B008
+) -> Problem:
     """Problems with one to three requirements, with and without bonds and fixed layers."""
-    chosen = draw(st.lists(requirements_of_any_kind(), min_size=1, max_size=3))
+    chosen = draw(st.lists(requirements, min_size=1, max_size=3))
     return build_problem(
         *(field for field, _ in chosen),
         masks=[mask for _, mask in chosen],

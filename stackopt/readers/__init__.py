@@ -6,14 +6,16 @@ is in `checks`.
 
 from stackopt.readers.material_sets import read_material_set
 from stackopt.readers.problems import read_problem
-from stackopt.readers.stacks import parse_stack
+from stackopt.readers.stacks import parse_size, parse_stack, read_stack
 from stackopt.readers.tables import read_level_table, read_mask_table, read_permeability_table
 
 __all__ = [
+    "parse_size",
     "parse_stack",
     "read_level_table",
     "read_mask_table",
     "read_material_set",
     "read_permeability_table",
     "read_problem",
+    "read_stack",
 ]

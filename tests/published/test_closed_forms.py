@@ -39,7 +39,9 @@ def test_resistive_sheet_at_an_angle(degrees: float, resistance: float) -> None:
 
 
 def receding_images_db(q: complex) -> float:
-    """Thin sheet between coaxial dipoles: S. Levy, Proc. IRE 24, 1936 (attribution from memory); q = j w mu0 sigma t h/2."""
+    """Thin sheet between coaxial dipoles, q = j w mu0 sigma t h/2: S. Levy, Proc. IRE 24, 1936
+    (attribution from memory).
+    """
     decayed = np.exp(q) * special.exp1(q)
     return float(-20.0 * np.log10(abs(1.0 - q / 2.0 + q**2 / 2.0 - q**3 / 2.0 * decayed)))
 

@@ -94,8 +94,8 @@ def test_dipoles_through_stacks(layers: list[Layer], gaps: tuple[float, float]) 
 def test_dipoles_a_good_part_of_a_wavelength_apart(name: str, frequency: float) -> None:
     """k0 h up to 0.57, where waves propagate.
 
-    At 30 MHz the library is wrong by 0.1 dB for the two loss-free sheets, judged at 30 digits, because its interpolation
-    runs over the branch point of free space; `test_high_precision` takes over from here.
+    At 30 MHz the library is wrong by 0.1 dB for the two loss-free sheets, judged at 30 digits, because it interpolates
+    over the branch point of free space; `test_high_precision` takes over from here.
     """
     gaps = GEOMETRIES["room"]
     lines = fields.coaxial_lines(np.array([frequency]), 0.0, 0.0, sum(gaps), fields.REFERENCE_RULE)

@@ -2,9 +2,9 @@
 
 The handbook's shielding effectiveness S = A + R + C compares the wave behind the sheet with the wave that falls on it:
 -20 log10 |T| of `stackopt.physics.line`. The insertion loss of `stackopt.physics.fields` compares with *air* in the
-sheet's place instead. A plane wave does not weaken in air, so that both are the same for it; in the near field of a loop
-at distance r, where the wave impedance is j w mu_0 r, d of air has T = 1/(1 + d/2r), and the insertion loss is S less
-20 log10(1 + d/2r).
+sheet's place instead. A plane wave does not weaken in air, so that both are the same for it; in the near field of a
+loop at distance r, where the wave impedance is j w mu_0 r, d of air has T = 1/(1 + d/2r), and the insertion loss is S
+less 20 log10(1 + d/2r).
 """
 
 from __future__ import annotations
@@ -16,7 +16,7 @@ import pytest
 from builders import medium
 
 from stackopt.physics import fields, line
-from stackopt.physics.media import free_wavenumber, line_constants, skin_depth
+from stackopt.physics.media import free_wavenumber, skin_depth
 from stackopt.units import ETA_0, MU_0
 
 COPPER = 5.80e7
@@ -76,7 +76,7 @@ def chain_db(f, t, wave_impedance, mu=1.0, g=1.0):
 
 
 def thick_sheet_reflection_db(f, wave_impedance, mu=1.0, g=1.0):
-    """Reflection loss by stackopt: of a sheet of 12 skin depths, where nothing is reflected twice, less its absorption."""
+    """Reflection loss by stackopt: of a sheet of 12 skin depths, which reflects nothing twice, less its absorption."""
     delta = float(skin_depth(np.array([f]), mu, COPPER * g)[0])
     return chain_db(f, 12.0 * delta, wave_impedance, mu, g) - 12.0 * line.DB_PER_NEPER
 
@@ -140,7 +140,7 @@ def test_reflection_of_thick_sheets_is_table_8_4(f, metal, wave, printed):
 def test_reflection_in_the_full_near_fields(f, metal, wave, printed):
     """The near-field kinds use the full radial formula: the table's values well inside the transition r = lambda/2pi.
 
-    At 100 MHz r is 0.64 of the transition, where the field is neither: the values lie between near field and plane wave.
+    At 100 MHz r is 0.64 of the transition, where the field is neither: values lie between near field and plane wave.
     """
     mu, g = metal_values(metal, f)
     frequency = np.array([float(f)])
@@ -159,8 +159,8 @@ def test_reflection_in_the_full_near_fields(f, metal, wave, printed):
 def test_beyond_the_transition_the_near_fields_are_a_plane_wave(metal, make):
     """MIL-HDBK-419A's rule: the plane-wave equation holds above r = lambda/2pi.
 
-    At x times that distance the radial formula departs from the impedance of free space by a factor 1 + 1/x^2 to leading
-    order, which is 8.686/x^2 dB.
+    At x times that distance the radial formula departs from the impedance of free space by a factor 1 + 1/x^2 to
+    leading order, which is 8.686/x^2 dB.
     """
     f = 100e6
     mu, g = metal_values(metal, f)

@@ -80,7 +80,8 @@ def maxwell(a: float, b: float, h: float) -> float:
     """Mutual inductance of coaxial circles, J. C. Maxwell, A Treatise on Electricity and Magnetism, article 701."""
     m = 4.0 * a * b / ((a + b) ** 2 + h**2)
     kappa = math.sqrt(m)
-    return float(MU_0 * math.sqrt(a * b) * ((2.0 / kappa - kappa) * special.ellipk(m) - 2.0 / kappa * special.ellipe(m)))
+    integrals = (2.0 / kappa - kappa) * special.ellipk(m) - 2.0 / kappa * special.ellipe(m)
+    return float(MU_0 * math.sqrt(a * b) * integrals)
 
 
 @pytest.mark.parametrize(

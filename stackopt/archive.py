@@ -58,8 +58,8 @@ class Archive:
         """Whether a member is no worse in every objective than each of the vectors, and better in one; see `covers`."""
         return _strictly_covered(values, self.values)
 
-    def add(self, values: Integers, codes: Integers) -> None:
-        """Add feasible stacks.
+    def add(self, values: Integers, codes: Integers) -> int:
+        """Add feasible stacks; return how many objective vectors the archive gained.
 
         Parameters
         ----------
@@ -69,7 +69,7 @@ class Archive:
         worth = ~_strictly_covered(values, self.values)
         values, codes = values[worth], codes[worth]
         if len(values) == 0:
-            return
+            return 0
         merged = np.concatenate([self.values, values])
         stacks = np.concatenate([self.codes, codes])
         order = np.lexsort((*stacks.T[::-1], *merged.T[::-1]))
@@ -77,7 +77,9 @@ class Archive:
         distinct = np.append(True, np.any(merged[1:] != merged[:-1], axis=1))
         merged, stacks = merged[distinct], stacks[distinct]
         keep = non_dominated(merged)
+        before = self.values
         self.values, self.codes = merged[keep], stacks[keep]
+        return int(np.count_nonzero(~_covered(self.values, before)))
 
 
 def non_dominated(values: Integers) -> Booleans:

@@ -74,7 +74,7 @@ def best(rows: Sequence[FrontRow], quantity: str) -> int:
     if np.all(np.isnan(values)):
         raise NothingLeftError("No stack of the front has a price: the material set gives none for its sheets.")
     tied = np.flatnonzero(values == np.nanmin(values))
-    return int(tied[np.argmin(scaled([rows[index] for index in tied], QUANTITIES).sum(axis=1))])
+    return int(tied[np.argmin(scaled([rows[index] for index in tied.tolist()], QUANTITIES).sum(axis=1))])
 
 
 def nearest(rows: Sequence[FrontRow], index: int, objectives: Sequence[str], count: int = 3) -> list[int]:
@@ -136,7 +136,9 @@ def narrow(rows: Sequence[FrontRow], filters: Filters, currency: str) -> list[in
 def _blame(rows: Sequence[FrontRow], options: Mapping[str, Filters], currency: str) -> str:
     head = f"No stack of the front ({len(rows)} stacks) passes the filters."
     alone = {text: sum(map(part.passes, rows)) for text, part in options.items()}
-    guilty = [f"{text} alone leaves none: {_hint(rows, options[text], currency)}." for text in options if not alone[text]]
+    guilty = [
+        f"{text} alone leaves none: {_hint(rows, options[text], currency)}." for text in options if not alone[text]
+    ]
     if guilty:
         return " ".join([head, *guilty])
     spared = {
@@ -169,5 +171,3 @@ def _hint(rows: Sequence[FrontRow], part: Filters, currency: str) -> str:
         return f"every stack has {part.without[0]}"
     used = dict.fromkeys(sheet.material for row in rows for sheet in row.stack)
     return f"every stack needs another material; the front is made of {', '.join(used)}"
-
-

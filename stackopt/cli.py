@@ -14,6 +14,8 @@ from typing import TYPE_CHECKING, Annotated, Any
 import typer
 import typer.core
 
+from stackopt import results_cli
+from stackopt.cli_bench import bench
 from stackopt.errors import Finding, InputError, StackoptError
 
 if TYPE_CHECKING:
@@ -70,6 +72,8 @@ app = typer.Typer(
         "Exit codes: 0 done; 1 the answer is no; 2 bad input; 130 interrupted, checkpoint written."
     ),
 )
+
+app.add_typer(bench, name="bench")
 
 ProblemFile = Annotated[Path, typer.Argument(metavar="PROBLEM", help="Problem file (TOML).", show_default=False)]
 RunFolder = Annotated[Path, typer.Argument(metavar="RUN", help="Folder of a run.", show_default=False)]
@@ -134,13 +138,21 @@ def predict(
     problem: ProblemFile,
     stacks: Annotated[
         list[str],
-        typer.Argument(metavar="STACK", help='Such as "steel 150um / copper 35um", source side first.'),
+        typer.Argument(
+            metavar="STACK", help='Such as "steel 150um / copper 35um", source side first; or a stack.toml.'
+        ),
     ],
     csv: Annotated[Path | None, typer.Option(metavar="FILE", help="Write the table at full precision.")] = None,
     plot: Plot = None,
+    sensitivity: Annotated[
+        bool, typer.Option("--sensitivity", help="Tell which layer matters; with --plot, also as a figure beside it.")
+    ] = False,
+    layers: Annotated[Path | None, typer.Option(metavar="FILE", help="Write flux and heat of every layer.")] = None,
+    coil: Annotated[Path | None, typer.Option(metavar="FILE", help="Write the change of the source.")] = None,
     allow_outside: Outside = False,
 ) -> None:
     """Predict the attenuation of stacks against the mask. Any thickness may be written."""
+    from stackopt.outputs import drives
     from stackopt.outputs.console import make_console
     from stackopt.outputs.report import show_verdicts
     from stackopt.outputs.tables import prediction_tables, write_predictions
@@ -150,8 +162,9 @@ def predict(
     _refuse(_wrong_plot(plot))
     console = make_console()
     known = read_problem(problem, allow_outside)
+    drives.refuse_without(known, layers, coil)
     chosen = _parse_stacks(stacks, known)
-    predictions = predict_stacks(known, chosen)
+    predictions = predict_stacks(known, chosen, bands=True)
     _show_cautions(console, known, chosen)
     for table in prediction_tables(predictions, console.width):
         console.print(table)
@@ -159,11 +172,16 @@ def predict(
     if csv is not None:
         write_predictions(predictions, csv)
         console.print(f"Table: {csv}", soft_wrap=True)
+    drives.write_tables(console, known, predictions, layers, coil)
     if plot is not None:
         from stackopt.outputs.plots import write_prediction_plot
 
         write_prediction_plot(known, chosen, plot)
         console.print(f"Plot: {plot}", soft_wrap=True)
+    if sensitivity:
+        from stackopt.outputs.tolerances import show_sensitivity
+
+        show_sensitivity(console, known, chosen, plot)
 
 
 @app.command()
@@ -252,15 +270,19 @@ def materials(
         console.print(f"Plot: {plot}", soft_wrap=True)
 
 
+results_cli.add_to(app)
+
+
 def _parse_stacks(texts: list[str], problem: Problem) -> list[Stack]:
-    """Read every stack and report the mistakes of all of them together."""
-    from stackopt.readers import parse_stack
+    """Read every stack, or stack file, and report the mistakes of all of them together."""
+    from stackopt.readers import parse_stack, read_stack
 
     stacks: list[Stack] = []
     findings: list[Finding] = []
     for text in texts:
         try:
-            stacks.append(parse_stack(text, problem.materials))
+            is_file = text.strip().lower().endswith(".toml")
+            stacks.append(read_stack(text, problem) if is_file else parse_stack(text, problem.materials))
         except InputError as error:
             findings.extend(error.findings)
     if findings:

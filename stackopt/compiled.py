@@ -8,7 +8,7 @@ that sums do not depend on the order of the sheets.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import TypeVar
 
@@ -151,6 +151,43 @@ class CompiledProblem:
         """Return the same rows with other sheets, for example of thicknesses that are no gauges."""
         return _assemble(self.problem, self.rows, sheets)
 
+    def with_room(self, thickest_m: float) -> CompiledProblem:
+        """Return the same with an unshielded level that covers stacks up to the given thickness."""
+        return self if thickest_m <= self.rows.thickest_m else replace(self, rows=self._rows(self.problem, thickest_m))
+
+    def varied(self, problem: Problem, sheets: Stack) -> CompiledProblem:
+        """Return the same rows for a problem that differs in the values of its materials only.
+
+        The rules on what may stand where stay those of the nominal sheets, and do not suit the given ones.
+        """
+        rules = problem.rules
+        same = (rules.source_side, rules.victim_side) == (
+            self.problem.rules.source_side,
+            self.problem.rules.victim_side,
+        )
+        rows = self.rows if same else self._rows(problem, self.rows.thickest_m)
+        return CompiledProblem(problem, sheets, rows, _sums(problem, sheets), self.rules)
+
+    def _rows(self, problem: Problem, thickest_m: float) -> Rows:
+        """Return the rows with what depends on the fixed layers and the largest thickness made anew."""
+        rows = self.rows
+        sides = [_fixed_sides(problem, lines) for lines in rows.spectra]
+        opens = [
+            _open_level(problem, lines, _reach_m(requirement.field, thickest_m), thickest_m)
+            for lines, requirement in zip(rows.spectra, problem.requirements, strict=True)
+        ]
+        return _read_only(
+            replace(
+                rows,
+                start=np.concatenate([start for start, _, _ in sides]),
+                ending=np.concatenate([ending for _, ending, _ in sides]),
+                fixed_scale=np.concatenate([scale for _, _, scale in sides]),
+                open_coefficients=_stacked([series for series, _ in opens]),
+                reach_m=np.concatenate([np.full(len(series), reach) for series, reach in opens]),
+                thickest_m=thickest_m,
+            )
+        )
+
 
 def compile_problem(
     problem: Problem,
@@ -189,19 +226,16 @@ def _compile_rows(
     problem: Problem, sheets: Stack, density: int, error_db: float, extra_hz: Sequence[Sequence[float]]
 ) -> Rows:
     thickest = thickest_stack_m(problem, sheets)
-    spectra, quadrature, opens, reach = [], [], [], []
+    spectra, quadrature, opens = [], [], []
     for number, requirement in enumerate(problem.requirements):
         grid = requirement.mask.grid_hz(density)
         if number < len(extra_hz):
             grid = np.union1d(grid, np.asarray(extra_hz[number], dtype=float))
         rule, error = choose_rule(problem, requirement.field, grid, sheets, error_db)
         lines = spectral_lines(requirement.field, grid, rule)
-        length = _reach_m(requirement.field, thickest)
         spectra.append(lines)
         quadrature.append(Quadrature(lines.k.shape[1], error))
-        opens.append(_open_coefficients(problem, lines, length, thickest))
-        reach.append(np.full(len(grid), length))
-    widest = max(coefficients.shape[1] for coefficients in opens)
+        opens.append(_open_level(problem, lines, _reach_m(requirement.field, thickest), thickest))
     sides = [_fixed_sides(problem, lines) for lines in spectra]
     counts = np.concatenate([np.full(len(lines.frequency_hz), count_blocks(lines.k.shape[1])) for lines in spectra])
     numbers = np.concatenate([np.full(len(lines.frequency_hz), n) for n, lines in enumerate(spectra)])
@@ -218,10 +252,8 @@ def _compile_rows(
             start=np.concatenate([start for start, _, _ in sides]),
             ending=np.concatenate([ending for _, ending, _ in sides]),
             fixed_scale=np.concatenate([scale for _, _, scale in sides]),
-            open_coefficients=np.concatenate(
-                [np.pad(coefficients, ((0, 0), (0, widest - coefficients.shape[1]))) for coefficients in opens]
-            ),
-            reach_m=np.concatenate(reach),
+            open_coefficients=_stacked([series for series, _ in opens]),
+            reach_m=np.concatenate([np.full(len(series), reach) for series, reach in opens]),
             thickest_m=thickest,
         )
     )
@@ -245,8 +277,42 @@ def _reach_m(field: Field, thickest_m: float) -> float:
     return thickest_m
 
 
-def _open_coefficients(problem: Problem, lines: fields.SpectralLines, reach_m: float, thickest_m: float) -> Real:
-    """Unshielded level 20 log10 |field|, dB, as Chebyshev series in the log of the stack's thickness, shape (R, C)."""
+def _open_level(
+    problem: Problem, lines: fields.SpectralLines, longest_m: float, thickest_m: float
+) -> tuple[Real, float]:
+    """Unshielded level 20 log10 |field|, dB, as Chebyshev series in log(1 + thickness/reach), and that reach, m.
+
+    The series have the shape (R, C). The reach is the length by which the field changes: the given one, unless fixed
+    layers stand on both sides; between two permeable ones the first micrometres already matter.
+    """
+    degrees, reach_m = [6, 10, 16, 24, 40, 64, 96], longest_m
+    if problem.rules.source_side and problem.rules.victim_side:
+        few = _some_rows(lines, 6)
+        reaches = [longest_m * 10.0**-n for n in (0, 2, 4, 6)]
+        while True:
+            errors = [_open_series(problem, few, reach, thickest_m, degrees[0])[1] for reach in reaches]
+            reach_m = reaches[int(np.argmin(errors))]
+            if min(errors) < 1.0 or len(degrees) == 1:
+                break
+            degrees = degrees[1:]
+    for degree in degrees:
+        series, error = _open_series(problem, lines, reach_m, thickest_m, degree)
+        if error < 1.0:
+            break
+    return series, reach_m
+
+
+def _some_rows(lines: fields.SpectralLines, count: int) -> fields.SpectralLines:
+    """Return the spectral lines of a few frequencies from the first to the last."""
+    rows = np.unique(np.linspace(0, len(lines.frequency_hz) - 1, count).astype(int))
+    arrays = {name: getattr(lines, name)[rows] for name in ("frequency_hz", "k", "terminal", "weight")}
+    return replace(lines, **arrays)
+
+
+def _open_series(
+    problem: Problem, lines: fields.SpectralLines, reach_m: float, thickest_m: float, degree: int
+) -> tuple[Real, float]:
+    """Return the unshielded level's series of a degree, shape (R, C), and its error over the allowed one."""
     source = media(problem, problem.rules.source_side, lines.frequency_hz)
     victim = media(problem, problem.rules.victim_side, lines.frequency_hz)
 
@@ -258,16 +324,16 @@ def _open_coefficients(problem: Problem, lines: fields.SpectralLines, reach_m: f
             levels.append(line.DB_PER_NEPER * (np.log(np.abs(value)) - scale))
         return np.array(levels)
 
-    probe = np.linspace(-1.0, 1.0, 7)
-    exact = level_db(probe)
-    for degree in (6, 10, 16, 24, 40, 64):
-        nodes = chebyshev.chebpts1(degree + 1)
-        coefficients = chebyshev.chebfit(nodes, level_db(nodes), degree)
-        if np.max(np.abs(chebyshev.chebval(probe, coefficients) - exact.T)) < 1e-11 * np.max(
-            np.abs(exact), initial=1.0
-        ):
-            break
-    return np.ascontiguousarray(coefficients.T)
+    nodes, probe = chebyshev.chebpts1(degree + 1), np.linspace(-1.0, 1.0, 12)
+    series, exact = chebyshev.chebfit(nodes, level_db(nodes), degree), level_db(probe)
+    error = np.max(np.abs(chebyshev.chebval(probe, series) - exact.T))
+    return np.ascontiguousarray(series.T), float(error / (1e-11 * np.max(np.abs(exact), initial=1.0)))
+
+
+def _stacked(coefficients: Sequence[Real]) -> Real:
+    """Put the series of all requirements into one array, as wide as the longest of them."""
+    widest = max(series.shape[1] for series in coefficients)
+    return np.concatenate([np.pad(series, ((0, 0), (0, widest - series.shape[1]))) for series in coefficients])
 
 
 def _fixed_sides(problem: Problem, lines: fields.SpectralLines) -> tuple[Real, Real, Real]:
@@ -306,8 +372,9 @@ def _sheet_tables(problem: Problem, rows: Rows, sheets: Stack) -> SheetTables:
                 bonded.add(number, line.cascade((chains.of(bond), chain), lines.k.shape), lines, limit)
         bare.next_requirement(lines)
         bonded.next_requirement(lines)
-    following = bare if bond is None else bonded
-    return _read_only(SheetTables(bare.flat(), following.flat(), bare.scale, following.scale))
+    first = bare.flat()
+    following, scale = (first, bare.scale) if bond is None else (bonded.flat(), bonded.scale)
+    return _read_only(SheetTables(first, following, bare.scale, scale))
 
 
 class _Tabulator:

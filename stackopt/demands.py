@@ -12,8 +12,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stackopt.compiled import CompiledProblem
-from stackopt.problem import Problem
+from stackopt.evaluate import decode
+from stackopt.inside import assembly, keeps_limits, worst_inside
+from stackopt.problem import Problem, Stack, format_stack
+from stackopt.tolerance import meets_assumption, samples_for, tolerances_of
 
+Real = NDArray[np.float64]
 Integers = NDArray[np.int64]
 Booleans = NDArray[np.bool_]
 
@@ -23,7 +27,16 @@ Demand = Callable[[CompiledProblem, Integers], Booleans]
 
 def demands_of(problem: Problem) -> tuple[Demand, ...]:
     """Demands of a problem, cheapest first; none for most."""
-    return ()
+    found: list[Demand] = []
+    if problem.search.assume != "nominal":
+        found.append(meets_assumption)
+    if faces_differ(problem):
+        found.append(_keeps_drive_limits)
+    return tuple(found)
+
+
+def _keeps_drive_limits(compiled: CompiledProblem, codes: Integers) -> Booleans:
+    return keeps_limits(compiled.problem, decode(compiled, codes))
 
 
 def met(compiled: CompiledProblem, codes: Integers) -> Booleans:
@@ -39,3 +52,51 @@ def met(compiled: CompiledProblem, codes: Integers) -> Booleans:
 def faces_differ(problem: Problem) -> bool:
     """Whether a demand may treat a stack and its mirror image differently: what happens inside layers does."""
     return any(requirement.drive is not None for requirement in problem.requirements)
+
+
+def heat_w(compiled: CompiledProblem, codes: Integers) -> Real:
+    """Heat of sheets and bonds under the drives, W, the worst over all requirements."""
+    return worst_inside(compiled.problem, decode(compiled, codes)).heat_w
+
+
+def decisive_margins(
+    compiled: CompiledProblem, codes: Integers, margin_db: Real, row: Integers
+) -> tuple[Real, Integers]:
+    """Return the margins that decide, dB, and their rows: the nominal ones given, or those of the worst corners.
+
+    A stack that misses its yield has the margin of its worst corner.
+    """
+    assume = compiled.problem.search.assume
+    if assume == "nominal" or len(codes) == 0:
+        return margin_db, row
+    worst = tolerances_of(compiled).worst_margins(codes)
+    if assume == "worst":
+        return worst.margin_db, worst.row
+    missed = ~meets_assumption(compiled, codes)
+    return np.where(missed, np.minimum(worst.margin_db, margin_db), margin_db), np.where(missed, worst.row, row)
+
+
+def extra_columns(compiled: CompiledProblem, codes: Integers) -> list[dict[str, float | str]]:
+    """Further columns of front.csv for each stack: worst margin or yield where assumed, flux and heat where driven."""
+    problem, search = compiled.problem, compiled.problem.search
+    columns: dict[str, list[float | str]] = {}
+    if len(codes) and search.assume == "worst":
+        columns["worst_margin_db"] = tolerances_of(compiled).worst_margins(codes).margin_db.tolist()
+    if len(codes) and search.assume == "yield":
+        found = tolerances_of(compiled).yield_of(codes, samples_for(search.yield_goal), search.random_seed)
+        columns |= {
+            "yield": found.fraction.tolist(), "yield_low": found.low.tolist(), "yield_high": found.high.tolist()
+        }  # fmt: skip
+    if len(codes) and faces_differ(problem):
+        stacks = decode(compiled, codes)
+        within = worst_inside(problem, stacks)
+        columns["flux_fraction"] = within.flux_fraction.tolist()
+        columns["flux_layer"] = [_layer(problem, s, n) for s, n in zip(stacks, within.layer.tolist(), strict=True)]
+        columns["heat_w"] = within.heat_w.tolist()
+    return [dict(zip(columns, values, strict=True)) for values in zip(*columns.values(), strict=True)] or [{}] * len(
+        codes
+    )
+
+
+def _layer(problem: Problem, stack: Stack, number: int) -> str:
+    return format_stack(assembly(problem, stack)[number : number + 1]) if number >= 0 else ""

@@ -13,7 +13,7 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-from stackopt import evaluate
+from stackopt import demands, evaluate
 from stackopt.compiled import MARGIN_SLACK_DB, CompiledProblem
 
 Integers = NDArray[np.int64]
@@ -44,7 +44,8 @@ def equal_stacks(compiled: CompiledProblem, values: Integers) -> tuple[Integers,
         batch = batch[evaluate.allowed(compiled, batch, totals)]
         margin, _ = evaluate.margins(compiled, batch)
         batch = batch[margin >= -MARGIN_SLACK_DB]
-        vectors = evaluate.objective_values(compiled, batch, evaluate.sums(compiled, batch), np.zeros(len(batch)))
+        batch = batch[demands.met(compiled, batch)]
+        vectors = evaluate.objective_values(compiled, batch, evaluate.sums(compiled, batch))
         rows.append(np.array([number[vector.tobytes()] for vector in vectors], dtype=np.int64))
         codes.append(batch)
     return np.concatenate(rows), np.concatenate(codes)

@@ -115,14 +115,29 @@ MARGIN_UNIT = 1e9
 """Integer margin units in a dB; the margin enters objective vectors with its sign changed, smaller being better."""
 
 
-def objective_values(compiled: CompiledProblem, codes: Integers, totals: Integers, margin_db: Real) -> Integers:
-    """Integer objectives of stacks in the problem's order, all to be minimised, shape (stack, objective)."""
+HEAT_UNIT = 1e12
+"""Integer heat units in a watt."""
+
+
+def objective_values(
+    compiled: CompiledProblem,
+    codes: Integers,
+    totals: Integers,
+    margin_db: Real | float = 0.0,
+    heat_w: Real | float = 0.0,
+) -> Integers:
+    """Integer objectives of stacks in the problem's order, all to be minimised, shape (stack, objective).
+
+    Margin and heat matter only where they are objectives.
+    """
+    none = np.zeros(len(codes))
     columns = {
         "mass": totals[:, 0],
         "cost": totals[:, 1],
         "thickness": totals[:, 2],
         "sheets": count_sheets(codes),
-        "margin": -np.round(margin_db * MARGIN_UNIT).astype(np.int64),
+        "margin": -np.round((margin_db + none) * MARGIN_UNIT).astype(np.int64),
+        "heat": np.round((heat_w + none) * HEAT_UNIT).astype(np.int64),
     }
     return np.stack([columns[name] for name in compiled.problem.search.objectives], axis=1)
 

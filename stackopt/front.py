@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from dataclasses import dataclass
+import math
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 from stackopt.problem import Problem, Stack, format_stack
@@ -30,7 +31,9 @@ COLUMNS = (
 class FrontRow:
     """One stack of a front; ``margin_db`` is the smallest over all requirements, found at ``tightest_hz``.
 
-    ``cost_per_m2`` is NaN where the material set gives no prices.
+    ``cost_per_m2`` is NaN where the material set gives no prices. ``extra`` holds further columns, the same ones in
+    every row of a front: ``worst_margin_db``, or ``yield`` with the ends of its interval, where the problem assumes
+    them; ``flux_fraction``, ``flux_layer`` and ``heat_w`` where it has a drive.
     """
 
     stack: Stack
@@ -40,6 +43,7 @@ class FrontRow:
     margin_db: float
     tightest_hz: float
     requirement: str
+    extra: Mapping[str, float | str] = field(default_factory=dict, hash=False)
 
     @property
     def sheets(self) -> int:
@@ -54,6 +58,7 @@ class FrontRow:
             "thickness": self.thickness_m,
             "sheets": float(self.sheets),
             "margin": self.margin_db,
+            "heat": float(self.extra.get("heat_w", math.nan)),
         }[name]
 
 
@@ -95,6 +100,8 @@ def rows_to_frame(rows: Iterable[FrontRow]) -> pd.DataFrame:
     """Return rows as a data frame with the columns of front.csv, ranked from 1 in the given order."""
     import pandas as pd
 
+    rows = list(rows)
+    more = list(rows[0].extra) if rows else []
     records = [
         (
             rank,
@@ -106,7 +113,8 @@ def rows_to_frame(rows: Iterable[FrontRow]) -> pd.DataFrame:
             row.margin_db,
             row.tightest_hz,
             row.requirement,
+            *(row.extra.get(name, math.nan) for name in more),
         )
         for rank, row in enumerate(rows, start=1)
     ]
-    return pd.DataFrame.from_records(records, columns=list(COLUMNS))
+    return pd.DataFrame.from_records(records, columns=[*COLUMNS, *more])

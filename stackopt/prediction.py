@@ -14,10 +14,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stackopt import evaluate
+from stackopt.band import Band, tolerance_band
 from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_UNIT, compile_problem, sheet_sums
 from stackopt.front import FrontRow
+from stackopt.inside import Inside, broken_limits, inside
 from stackopt.model import with_bonds
 from stackopt.problem import Problem, Sheet, Stack
+from stackopt.rayleigh import Level, at_level, needs_level
 from stackopt.units import format_thickness
 
 Real = NDArray[np.float64]
@@ -51,11 +54,20 @@ class Prediction:
         One for each requirement.
     broken : tuple of str
         Rules of the problem that the stack breaks, in words.
+    band : Band, optional
+        Over the tolerances; None where there are none, or where none was asked for.
+    inside : tuple of Inside
+        What each drive of the problem does inside the stack and to its source.
+    levels : tuple of Level
+        The stack at the permeability that a drive brings about, where a material says how it depends on the field.
     """
 
     row: FrontRow
     curves: tuple[Curve, ...]
     broken: tuple[str, ...] = ()
+    band: Band | None = None
+    inside: tuple[Inside, ...] = ()
+    levels: tuple[Level, ...] = ()
 
     @property
     def meets_mask(self) -> bool:
@@ -63,7 +75,7 @@ class Prediction:
         return self.row.margin_db >= -MARGIN_SLACK_DB
 
 
-def predict(problem: Problem, stacks: Sequence[Stack], density: int = 1) -> tuple[Prediction, ...]:
+def predict(problem: Problem, stacks: Sequence[Stack], density: int = 1, bands: bool = False) -> tuple[Prediction, ...]:
     """Predict stacks of a problem's materials.
 
     Parameters
@@ -73,6 +85,8 @@ def predict(problem: Problem, stacks: Sequence[Stack], density: int = 1) -> tupl
         Source side first; bonds are added as in the search.
     density : int
         Multiplies the points per decade of every mask: 1 for the search grid.
+    bands : bool
+        Whether to compute what the tolerances of the materials make of it.
 
     Returns
     -------
@@ -93,8 +107,20 @@ def predict(problem: Problem, stacks: Sequence[Stack], density: int = 1) -> tupl
             for requirement, grid, value in zip(problem.requirements, grids, values, strict=True)
         )
         row = _row(problem, stack, curves)
-        predictions.append(Prediction(row, curves, tuple(_broken(problem, row))))
+        band = tolerance_band(problem, stack, density) if bands else None
+        states, levels = _driven(problem, stack)
+        broken = [*_broken(problem, row), *(text for state in states for text in broken_limits(state))]
+        predictions.append(Prediction(row, curves, tuple(broken), band, states, levels))
     return tuple(predictions)
+
+
+def _driven(problem: Problem, stack: Stack) -> tuple[tuple[Inside, ...], tuple[Level, ...]]:
+    """Tell what every drive does inside a stack, at the level of its field where a material depends on it."""
+    driven = [requirement for requirement in problem.requirements if requirement.drive is not None]
+    levels = {one.name: at_level(problem, stack, one) for one in driven if needs_level(problem, stack, one)}
+    extras = [levels[one.name].extra_mu if one.name in levels else None for one in driven]
+    states = tuple(inside(problem, stack, one, extra) for one, extra in zip(driven, extras, strict=True))
+    return states, tuple(levels.values())
 
 
 def totals(problem: Problem, stack: Stack) -> tuple[float, float, float]:

@@ -19,9 +19,11 @@ from stackopt.physics.permeability import Constant, PermeabilityLaw
 from stackopt.units import format_thickness
 
 NON_MAGNETIC = Constant(1.0)
-OBJECTIVES = ("mass", "cost", "thickness", "sheets", "margin")
+OBJECTIVES = ("mass", "cost", "thickness", "sheets", "margin", "heat")
 PROVABLE_OBJECTIVES = ("mass", "cost", "thickness", "sheets")
 """Objectives that only grow when a sheet is added."""
+ASSUMPTIONS = ("nominal", "worst", "yield")
+"""What values of the materials a search may assume."""
 
 
 @dataclass(frozen=True)

@@ -261,7 +261,7 @@ class Collector(Prover):
 
 def _values(compiled: CompiledProblem, codes: Integers) -> Integers:
     totals = evaluate.sums(compiled, codes)
-    return evaluate.objective_values(compiled, codes, totals, np.zeros(len(codes)))
+    return evaluate.objective_values(compiled, codes, totals)
 
 
 def mirrored(codes: Integers) -> Integers:
@@ -352,8 +352,9 @@ class Tables:
         least = np.full((self.levels, descent.CELLS, descent.CELLS), descent.UNCOVERED, dtype=np.int64)
         # A cell stands for its lower corner, so that a stack counts from the cell above its own.
         first, second = (-(-columns[n] >> shift[n]) for n in (0, 1))
-        inside = (first < descent.CELLS) & (second < descent.CELLS)
         level = sheets if self.levels > 1 else nothing
+        # Stretched members may lie beyond what any stack reaches; those cover nothing.
+        inside = (first < descent.CELLS) & (second < descent.CELLS) & (level < self.levels)
         np.minimum.at(least, (level[inside], first[inside], second[inside]), columns[2][inside])
         for axis in range(3):
             np.minimum.accumulate(least, axis=axis, out=least)

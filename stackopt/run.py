@@ -22,7 +22,7 @@ from stackopt.checkpoint import read_checkpoint, write_checkpoint
 from stackopt.errors import Finding, InputError, InterruptedRunError, RunError
 from stackopt.front import Front
 from stackopt.outputs.files import write_whole
-from stackopt.outputs.plots import write_trade_off
+from stackopt.outputs.plots import write_curves, write_trade_off
 from stackopt.outputs.tables import write_alternatives, write_equals, write_front
 from stackopt.problem import Problem
 from stackopt.readers import read_problem
@@ -224,7 +224,11 @@ class _Run:
             write_alternatives(front, self.folder / "alternatives.csv")
         if len(front):
             write_trade_off(front, self.folder / "trade_off.png")
+            write_curves(front, self.folder / "curves.png")
         self._write_record(front)
+        from stackopt.outputs.page import write_page  # a second to load, needed only here
+
+        write_page(front, self.folder / "trade_off.html", self.folder.resolve().name)
 
     def _write_record(self, front: Front | None) -> None:
         task = self.task

@@ -89,6 +89,7 @@ def _rows(path: Path, records: Iterable[dict[Any, Any]], problem: Problem) -> It
                 margin_db=float(record["margin_db"]),
                 tightest_hz=float(record["tightest_hz"]),
                 requirement=str(record["requirement"]),
+                extra={name: _number(value) for name, value in record.items() if name not in COLUMNS},
             )
             rank = int(record["rank"])
         except InputError as error:
@@ -99,6 +100,13 @@ def _rows(path: Path, records: Iterable[dict[Any, Any]], problem: Problem) -> It
             message = f"found requirement {row.requirement!r}, which the problem does not have; {START_ANEW}"
             raise RunError(Finding(str(path), where, message))
         yield rank, row
+
+
+def _number(value: object) -> float | str:
+    try:
+        return float(str(value))
+    except ValueError:
+        return str(value)
 
 
 def _cost(value: object) -> float:

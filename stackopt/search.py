@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from stackopt import evaluate
+from stackopt import demands, evaluate
 from stackopt.archive import Archive
 from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_UNIT, compile_problem
 from stackopt.explore import Explorer
@@ -45,6 +45,8 @@ class _Confirmed:
     stacks: list[Stack]
     totals: Integers
     margin_db: NDArray[np.float64]
+    decisive_db: NDArray[np.float64]
+    extra: list[dict[str, float | str]]
     frequency_hz: NDArray[np.float64]
     requirement: Integers
 
@@ -258,7 +260,7 @@ class Search:
             lambda: watcher(self._status("collecting alternatives", collector.covered, "", None)),
         )
         judged = self._judge_densely(evaluate.decode(self.compiled, collector.codes))
-        rows = [self._row(judged, n) for n in np.flatnonzero(judged.margin_db >= -MARGIN_SLACK_DB).tolist()]
+        rows = [self._row(judged, n) for n in np.flatnonzero(judged.decisive_db >= -MARGIN_SLACK_DB).tolist()]
         rows.sort(key=lambda row: [row.objective(name) for name in self.problem.search.objectives])
         whole = collector.complete and not collector.overflowed and front.complete
         share = f"{100.0 * within:g} %"
@@ -277,14 +279,16 @@ class Search:
     def _judge_densely(self, stacks: list[Stack]) -> _Confirmed:
         none = np.empty(0, dtype=np.int64)
         if not stacks:
-            return _Confirmed(none, [], none, np.empty(0), np.empty(0), none)
+            return _Confirmed(none, [], none, np.empty(0), np.empty(0), [], np.empty(0), none)
         sheets = tuple(dict.fromkeys(sheet for stack in stacks for sheet in stack))
         dense = compile_problem(self.problem, sheets, DENSITY, self.error_db / 10.0, self.extra_hz)
         codes = evaluate.encode(dense, stacks)
         totals = evaluate.sums(dense, codes)
         margin, row = evaluate.margins(dense, codes, totals)
+        decisive, row = demands.decisive_margins(dense, codes, margin, row)
+        extra = demands.extra_columns(dense, codes)
         where, which = dense.rows.frequency_hz[row], dense.rows.requirement[row]
-        return _Confirmed(none, stacks, totals, margin, where, which)
+        return _Confirmed(none, stacks, totals, margin, decisive, extra, where, which)
 
     def _candidates(self) -> tuple[Integers, list[Stack]]:
         if self.obstacle is not None:
@@ -300,8 +304,8 @@ class Search:
         failures = []
         for row in range(len(self.archive)):
             here = np.flatnonzero(confirmed.rows == row)
-            best = here[np.argmax(confirmed.margin_db[here])]
-            if confirmed.margin_db[best] < -MARGIN_SLACK_DB:
+            best = here[np.argmax(confirmed.decisive_db[here])]
+            if confirmed.decisive_db[best] < -MARGIN_SLACK_DB:
                 failures.append((int(confirmed.requirement[best]), float(confirmed.frequency_hz[best])))
         return failures
 
@@ -309,10 +313,10 @@ class Search:
         """Front of the confirmed stacks; of equal ones the row shows the one with the largest margin."""
         ranked, equals = [], []
         for number in range(len(self.archive)):
-            here = np.flatnonzero((confirmed.rows == number) & (confirmed.margin_db >= -MARGIN_SLACK_DB))
+            here = np.flatnonzero((confirmed.rows == number) & (confirmed.decisive_db >= -MARGIN_SLACK_DB))
             if len(here) == 0:
                 continue
-            best, *others = sorted(here.tolist(), key=lambda n: -round(float(confirmed.margin_db[n]), 6))
+            best, *others = sorted(here.tolist(), key=lambda n: -round(float(confirmed.decisive_db[n]), 6))
             ranked.append(self._row(confirmed, best))
             equals += [(len(ranked), self._row(confirmed, n)) for n in others]
         complete = self.prover is not None and self.prover.complete and not some_failed
@@ -331,6 +335,7 @@ class Search:
             margin_db=float(confirmed.margin_db[n]),
             tightest_hz=float(confirmed.frequency_hz[n]),
             requirement=self.problem.requirements[confirmed.requirement[n]].name,
+            extra=confirmed.extra[n],
         )
 
     def _statement(self, size: int, complete: bool, some_failed: bool) -> str:
@@ -368,6 +373,8 @@ def _objective_text(name: str, value: int, currency: str) -> str:
         return f"{value / COST_UNIT:.4g} {currency}/m^2"
     if name == "thickness":
         return f"{value / THICKNESS_UNIT * 1e3:.4g} mm"
+    if name == "heat":
+        return f"{value / evaluate.HEAT_UNIT:.4g} W"
     if name == "margin":
         return f"{-value / evaluate.MARGIN_UNIT:.1f} dB"
     return str(value)

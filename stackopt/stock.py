@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from stackopt import demands, evaluate
 from stackopt.compiled import MARGIN_SLACK_DB, THICKNESS_UNIT, CompiledProblem
-from stackopt.problem import Sheet, Stack
+from stackopt.problem import PROVABLE_OBJECTIVES, Sheet, Stack
 
 Real = NDArray[np.float64]
 Integers = NDArray[np.int64]
@@ -49,6 +49,11 @@ class Stock:
     def positions(self) -> int:
         """Largest number of sheets in a stack."""
         return self.compiled.rules.max_sheets
+
+    @property
+    def screens(self) -> bool:
+        """Whether a stack's objectives are known before its attenuation."""
+        return set(self.compiled.problem.search.objectives) <= set(PROVABLE_OBJECTIVES)
 
     @property
     def gauges(self) -> int:
@@ -124,19 +129,21 @@ class Stock:
         compiled, codes = self.tabulated(genes)
         totals = evaluate.sums(compiled, codes)
         lawful = evaluate.allowed(compiled, codes, totals)
-        wants_margin = "margin" in compiled.problem.search.objectives
         violation = np.where(lawful, SCREENED_DB, 1e3 + evaluate.excess(compiled, codes, totals))
-        values = evaluate.objective_values(compiled, codes, totals, np.zeros(len(codes)))
-        needed = lawful & (True if wants_margin else ~screen(values))
+        values = evaluate.objective_values(compiled, codes, totals)
+        # Only objectives that never shrink with a sheet can be screened before the physics is known.
+        needed = lawful if not self.screens else lawful & ~screen(values)
+        feasible = np.zeros(len(codes), dtype=bool)
         if np.any(needed):
             subset, subset_codes = self.tabulated(genes[needed])
             margin, _ = evaluate.margins(subset, subset_codes)
-            violation[needed] = -margin - MARGIN_SLACK_DB
-            values[needed] = evaluate.objective_values(subset, subset_codes, totals[needed], margin)
-        feasible = needed & (violation <= 0.0)
-        if np.any(feasible) and demands.demands_of(compiled.problem):
-            subset, subset_codes = self.tabulated(genes[feasible])
-            failing = np.flatnonzero(feasible)[~demands.met(subset, subset_codes)]
-            feasible[failing] = False
-            violation[failing] = UNMET_DB
+            lacking = -margin - MARGIN_SLACK_DB
+            good = lacking <= 0.0
+            good[good] = demands.met(subset, subset_codes[good])
+            violation[needed] = np.where(good | (lacking > 0.0), lacking, UNMET_DB)
+            feasible[needed] = good
+            heat = np.zeros(len(margin))
+            if "heat" in compiled.problem.search.objectives and np.any(good):
+                heat[good] = demands.heat_w(subset, subset_codes[good])
+            values[needed] = evaluate.objective_values(subset, subset_codes, totals[needed], margin, heat)
         return Judged(values, violation, feasible, int(np.count_nonzero(needed)))

@@ -35,6 +35,8 @@ UNITS = {
     "voltage": ("V", '"20 uV"'),
     "angle": ("rad", '"30 deg"'),
     "current": ("A", '"12 A"'),
+    "moment": ("A m^2", '"0.5 A m^2"'),
+    "rayleigh coefficient": ("m/A", '"0.5 m/A"'),
     "power": ("W", '"2 W"'),
     "inductance": ("H", '"24 uH"'),
     "level": ("dB", '"14 dB"'),

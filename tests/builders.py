@@ -33,7 +33,7 @@ def material(
     name: str, conductivity: float, density: float, gauges_um: Sequence[float], price: float | None, **more: Any
 ) -> Material:
     """A material with gauges in micrometres."""
-    gauges = tuple(gauge * 1e-6 for gauge in gauges_um)
+    gauges = tuple(gauge / 1e6 for gauge in gauges_um)
     return Material(name, conductivity, density, gauges_m=gauges, price_per_kg=price, **more)
 
 
@@ -111,7 +111,7 @@ def media_of(layers: Sequence[Layer], frequency_hz: Real) -> list[tuple[Medium, 
 
 def film(thickness_um: float) -> Sheet:
     """A film of the given thickness in micrometres."""
-    return Sheet("film", thickness_um * 1e-6)
+    return Sheet("film", thickness_um / 1e6)
 
 
 def ranged(name: str, like: str, low_m: float, high_m: float) -> Material:

@@ -100,13 +100,12 @@ walls = st.builds(Sheet, st.sampled_from(["film", "steel", "aluminium", "ferrite
 fixed_layers = st.lists(walls, max_size=2).map(tuple)
 
 
+any_requirement = requirements_of_any_kind()
 plane_wave_requirements = st.tuples(st.just(PlaneWave()), masks(static=False))
 
 
 @st.composite
-def problems(
-    draw: st.DrawFn, requirements: st.SearchStrategy[tuple[Field, Mask]] = requirements_of_any_kind()  # noqa: B008
-) -> Problem:
+def problems(draw: st.DrawFn, requirements: st.SearchStrategy[tuple[Field, Mask]] = any_requirement) -> Problem:
     """Problems with one to three requirements, with and without bonds and fixed layers."""
     chosen = draw(st.lists(requirements, min_size=1, max_size=3))
     return build_problem(

@@ -32,10 +32,10 @@ def content(archive: Archive) -> list[Entry]:
     return [(tuple(v), tuple(c)) for v, c in zip(archive.values.tolist(), archive.codes.tolist(), strict=True)]
 
 
-def add(archive: Archive, entries: Sequence[Entry]) -> None:
+def add(archive: Archive, entries: Sequence[Entry]) -> int:
     objectives, positions = archive.values.shape[1], archive.codes.shape[1]
     values = np.array([vector for vector, _ in entries], dtype=np.int64).reshape(-1, objectives)
-    archive.add(values, np.array([code for _, code in entries], dtype=np.int64).reshape(-1, positions))
+    return archive.add(values, np.array([code for _, code in entries], dtype=np.int64).reshape(-1, positions))
 
 
 @st.composite
@@ -89,6 +89,15 @@ def test_covers_and_dominates(entries: list[list[Entry]], others: list[list[Entr
 
 
 @given(batches())
+def test_add_counts_the_vectors_that_the_archive_gained(entries: list[list[Entry]]) -> None:
+    archive = Archive(width_of(entries), 2)
+    for batch in entries:
+        before = {vector for vector, _ in content(archive)}
+        gained = add(archive, batch)
+        assert gained == len({vector for vector, _ in content(archive)} - before)
+
+
+@given(batches())
 def test_non_dominated_keeps_equal_vectors(entries: list[list[Entry]]) -> None:
     vectors = [vector for batch in entries for vector, _ in batch]
     values = np.array(vectors, dtype=np.int64).reshape(-1, width_of(entries))
@@ -107,21 +116,21 @@ class TestArchive:
 
     def test_nothing_to_add(self) -> None:
         archive = Archive(2, 2)
-        add(archive, [((1, 2), (1, 0))])
-        add(archive, [])
+        assert add(archive, [((1, 2), (1, 0))]) == 1
+        assert add(archive, []) == 0
         assert content(archive) == [((1, 2), (1, 0))]
 
     @pytest.mark.parametrize("first", [(1, 2), (2, 1)])
     def test_of_equal_vectors_the_first_codes_stay(self, first: Vector) -> None:
         archive = Archive(2, 2)
-        add(archive, [((5, 5), first)])
-        add(archive, [((5, 5), (2, 1)), ((5, 5), (1, 2)), ((5, 5), (2, 2))])
+        assert add(archive, [((5, 5), first)]) == 1
+        assert add(archive, [((5, 5), (2, 1)), ((5, 5), (1, 2)), ((5, 5), (2, 2))]) == 0
         assert content(archive) == [((5, 5), (1, 2))]
 
     def test_a_better_vector_displaces_members(self) -> None:
         archive = Archive(2, 2)
         add(archive, [((1, 9), (1, 0)), ((5, 5), (2, 0)), ((9, 1), (3, 0))])
-        add(archive, [((4, 5), (4, 0))])
+        assert add(archive, [((4, 5), (4, 0))]) == 1
         assert content(archive) == [((1, 9), (1, 0)), ((4, 5), (4, 0)), ((9, 1), (3, 0))]
 
     def test_a_copy_is_independent(self) -> None:
@@ -137,6 +146,6 @@ class TestArchive:
         archive = Archive(2, 2)
         line = [((n, 1000 - n), (n, 0)) for n in range(1000)]
         behind = [((n + 1, 1000 - n), (n, 1)) for n in range(1000)]
-        add(archive, behind + line)
+        assert add(archive, behind + line) == 1000
         assert content(archive) == line
         assert archive.covers(np.array([vector for vector, _ in behind])).all()

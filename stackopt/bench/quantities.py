@@ -13,6 +13,7 @@ from stackopt.physics.permeability import ColeCole, Constant, Debye, Lorentz, Pe
 
 Real = NDArray[np.float64]
 
+NON_MAGNETIC = Constant(1.0)
 CONDUCTIVITY_S_PER_M = (1e-3, 1e9)
 SUSCEPTIBILITY = (1e-3, 1e6)
 
@@ -87,6 +88,8 @@ class Hypothesis:
     @property
     def name(self) -> str:
         """What the law is called in a list of laws."""
+        if self.permeability is NON_MAGNETIC:
+            return "non-magnetic"
         if self.permeability is not None:
             return "known permeability"
         plus = " with high_frequency" if HIGH_SHARE in self.quantities else ""
@@ -94,9 +97,7 @@ class Hypothesis:
 
     def values(self, inside: Real) -> dict[str, float]:
         """Return the free values by name."""
-        return {
-            quantity.name: quantity.value(float(x)) for quantity, x in zip(self.quantities, inside, strict=True)
-        }
+        return {quantity.name: quantity.value(float(x)) for quantity, x in zip(self.quantities, inside, strict=True)}
 
     def material(self, inside: Real) -> tuple[float, PermeabilityLaw]:
         """Return conductivity (S/m) and permeability for the fit's variables, shape (quantity,)."""
@@ -129,14 +130,14 @@ def hypotheses(
     Parameters
     ----------
     frequency_hz : tuple of float
-        Lowest and highest measured frequency, Hz; laws may turn from a tenth of the one to thirty times the other.
+        Lowest and highest measured frequency, Hz; laws may turn from a third of the one to thirty times the other.
     conductivity_s_per_m, permeability : float, PermeabilityLaw or None
         What is known.
     """
     first = (CONDUCTIVITY,) if conductivity_s_per_m is None else ()
     if permeability is not None:
         return [Hypothesis("", first, conductivity_s_per_m, permeability)]
-    span = (frequency_hz[0] / 10.0, frequency_hz[1] * 30.0)
+    span = (frequency_hz[0] / 3.0, frequency_hz[1] * 30.0)
     relaxation, resonance, damping = (Quantity(word, "Hz", *span) for word in ("relaxation", "resonance", "damping"))
     laws: list[tuple[str, tuple[Quantity, ...]]] = [
         ("constant", ()),
@@ -146,6 +147,5 @@ def hypotheses(
         ("cole-cole", (relaxation, BROADENING, HIGH_SHARE)),
         ("lorentz", (resonance, damping)),
     ]
-    return [
-        Hypothesis(law, (*first, INITIAL, *more), conductivity_s_per_m, None) for law, more in laws
-    ]
+    free = [Hypothesis(law, (*first, INITIAL, *more), conductivity_s_per_m, None) for law, more in laws]
+    return [Hypothesis("constant", first, None, NON_MAGNETIC), *free] if first else free

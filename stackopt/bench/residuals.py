@@ -23,12 +23,16 @@ MOST_FREQUENCIES = 120
 """Per sweep; denser sweeps are averaged in groups, which costs no information of a smooth curve."""
 
 
+LENGTHS = {"gaps": "gap_sum_m", "source radius": "source_radius_m", "victim radius": "victim_radius_m"}
+"""Nuisances of the coils, and what of them they change."""
+
+
 @dataclass(frozen=True)
 class Nuisance:
     """Something the setup states only within limits, in units of its standard deviation.
 
-    ``kind`` is "gaps", "source radius", "victim radius" or "thickness"; ``size`` its standard deviation relative to the
-    value; ``thickness_m`` the gauge of a "thickness".
+    ``kind`` is "gaps" (their sum), "source radius", "victim radius" or "thickness"; ``size`` its standard deviation,
+    in m or, for a thickness, relative; ``thickness_m`` the gauge of a "thickness".
     """
 
     kind: str
@@ -51,10 +55,12 @@ def points_of(entry: SheetSweep) -> Points:
     keep = ~entry.sweep.at_floor
     frequency, measured = entry.sweep.frequency_hz[keep], entry.sweep.attenuation_db[keep]
     groups = np.array_split(np.arange(len(frequency)), min(len(frequency), MOST_FREQUENCIES)) if len(frequency) else []
-    means = [(float(np.exp(np.mean(np.log(frequency[group])))), float(np.mean(measured[group]))) for group in groups]
-    return Points(
-        tuple(mean[0] for mean in means), np.array([mean[1] for mean in means]), entry, coils_of(entry.field)
-    )
+    means = [(_middle(frequency[group]), float(np.mean(measured[group]))) for group in groups]
+    return Points(tuple(mean[0] for mean in means), np.array([mean[1] for mean in means]), entry, coils_of(entry.field))
+
+
+def _middle(frequency_hz: Real) -> float:
+    return float(frequency_hz[0] if len(frequency_hz) == 1 else np.exp(np.mean(np.log(frequency_hz))))
 
 
 def nuisances_of(setup: Setup) -> list[Nuisance]:
@@ -65,10 +71,10 @@ def nuisances_of(setup: Setup) -> list[Nuisance]:
     coils, limits = coils_of(setup.field), setup.uncertainty
     found = []
     if limits.gaps_m > 0.0:
-        found.append(Nuisance("gaps", math.sqrt(2.0) * limits.gaps_m / HALF_WIDTH / coils.gap_sum_m))
+        found.append(Nuisance("gaps", math.sqrt(2.0) * limits.gaps_m / HALF_WIDTH))
     for kind, radius in (("source radius", coils.source_radius_m), ("victim radius", coils.victim_radius_m)):
         if limits.radii_m > 0.0 and radius > 0.0:
-            found.append(Nuisance(kind, limits.radii_m / HALF_WIDTH / radius))
+            found.append(Nuisance(kind, limits.radii_m / HALF_WIDTH))
     if limits.thickness > 0.0:
         gauges = dict.fromkeys(entry.thickness_m for entry in setup.sweeps)
         found += [Nuisance("thickness", limits.thickness / HALF_WIDTH, gauge) for gauge in gauges]
@@ -113,15 +119,13 @@ class Residuals:
     def _sweep_db(self, points: Points, sigma: float, law: PermeabilityLaw, shifts: Real, common: float) -> Real:
         coils, entry, thickness = points.coils, points.entry, points.entry.thickness_m * common
         for nuisance, shift in zip(self.nuisances, shifts, strict=True):
-            factor = math.exp(nuisance.size * float(shift))
-            if nuisance.kind == "gaps":
-                coils = replace(coils, gap_sum_m=coils.gap_sum_m * factor)
-            elif nuisance.kind == "source radius":
-                coils = replace(coils, source_radius_m=coils.source_radius_m * factor)
-            elif nuisance.kind == "victim radius":
-                coils = replace(coils, victim_radius_m=coils.victim_radius_m * factor)
-            elif nuisance.thickness_m == entry.thickness_m:
-                thickness *= factor
+            change = nuisance.size * float(shift)
+            if nuisance.kind == "thickness":
+                thickness *= math.exp(change) if nuisance.thickness_m == entry.thickness_m else 1.0
+            else:
+                name = LENGTHS[nuisance.kind]
+                before = getattr(coils, name)
+                coils = replace(coils, **{name: before * math.exp(change / before)})  # stays above zero
         return sheets_db(points.frequency_hz, coils, sigma, law, thickness, entry.count, entry.spacing_m)
 
     def jacobian_db(self, variables: Real, step: float = 1e-4) -> Real:

@@ -86,7 +86,9 @@ def _price(material: Material) -> str:
 
 
 def _property_table(material_set: MaterialSet) -> Table:
-    heads = ("conductivity", "density\nkg/m^3", "saturation\nT", "anodic index\nV")
+    heads = ["conductivity", "density\nkg/m^3", "saturation\nT", "anodic index\nV"]
+    levels = any(material.rayleigh_m_per_a for material in material_set.materials.values())
+    heads += ["Rayleigh coefficient\nm/A"] if levels else []
     table = _numbers("Properties", *heads)
     for name, material in material_set.materials.items():
         table.add_row(
@@ -95,6 +97,7 @@ def _property_table(material_set: MaterialSet) -> Table:
             f"{material.density_kg_per_m3:.0f}",
             _or_dash(material.saturation_t, ".3g"),
             _or_dash(material.anodic_index_v, "+.2f"),
+            *([_or_dash(material.rayleigh_m_per_a, ".3g")] if levels else []),
         )
     return table
 

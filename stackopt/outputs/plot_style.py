@@ -94,17 +94,24 @@ class FrequencyAxis:
     def apply(self, axes: Axes) -> None:
         """Give axes their scale, limits, ticks and label."""
         axes.set_xscale("log")
-        edge = max(self.high / self.low, 1.5) ** 0.03
-        left = self.static_at / _STATIC_STEP**0.5 if self.has_static else self.low / edge
-        axes.set_xlim(left, self.high * edge)
-        ticks = self._ticks()
-        axes.xaxis.set_major_locator(FixedLocator([self.static_at, *ticks] if self.has_static else ticks))
-        axes.xaxis.set_major_formatter(FuncFormatter(self._label))
+        axes.set_xlim(*self.limits())
+        axes.xaxis.set_major_locator(FixedLocator(self.ticks()))
+        axes.xaxis.set_major_formatter(FuncFormatter(self.label))
         axes.xaxis.set_minor_locator(FixedLocator(self._minor_ticks()))
         axes.xaxis.set_minor_formatter(NullFormatter())
         axes.set_xlabel("frequency")
         if self.has_static:
             axes.axvline(self.low / _STATIC_STEP**0.5, color=GREY, linewidth=0.8, linestyle=(0, (1, 2)))
+
+    def limits(self) -> tuple[float, float]:
+        """Both ends of the axis, Hz."""
+        edge = max(self.high / self.low, 1.5) ** 0.03
+        left = self.static_at / _STATIC_STEP**0.5 if self.has_static else self.low / edge
+        return left, self.high * edge
+
+    def ticks(self) -> list[float]:
+        """Where the axis is labelled, 0 Hz at its place included."""
+        return [self.static_at, *self._ticks()] if self.has_static else self._ticks()
 
     def _ticks(self) -> list[float]:
         first, last = np.ceil(np.log10(self.low) - 1e-9), np.floor(np.log10(self.high) + 1e-9)
@@ -118,7 +125,8 @@ class FrequencyAxis:
         ticks = np.outer(10.0**exponents, np.arange(1.0, 10.0)).ravel()
         return [float(tick) for tick in ticks if self.low <= tick <= self.high]
 
-    def _label(self, value: float, _: int | None = None) -> str:
+    def label(self, value: float, _: int | None = None) -> str:
+        """Write the frequency that stands at a place of the axis."""
         return "0 Hz" if self.has_static and value < self.low / 1.01 else format_frequency(value)
 
 
@@ -133,6 +141,17 @@ def draw_curve(axes: Axes, axis: FrequencyAxis, frequency_hz: Real, values: Real
     if axis.has_static and np.any(~positive):
         style["linestyle"] = "none"
         axes.plot([axis.static_at], values[~positive], **style, markersize=7.0, zorder=3.0)
+
+
+def draw_band(axes: Axes, axis: FrequencyAxis, frequency_hz: Real, low: Real, high: Real, number: int) -> None:
+    """Shade the band of curve ``number`` over the tolerances: an area above 0 Hz, a bar at 0 Hz."""
+    colour, positive = line_style(number)["color"], frequency_hz > 0.0
+    if np.any(positive):
+        x, bottom, top = frequency_hz[positive], low[positive], high[positive]
+        axes.fill_between(x, bottom, top, facecolor=colour, alpha=0.15, linewidth=0.0, zorder=2.0)
+    if axis.has_static and np.any(~positive):
+        bar = {"color": colour, "alpha": 0.3, "linewidth": 5.0}
+        axes.vlines([axis.static_at], low[~positive], high[~positive], **bar, zorder=2.0)
 
 
 def measurable(attenuation_db: Real) -> Real:

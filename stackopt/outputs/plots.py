@@ -12,11 +12,13 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure, SubFigure
 from matplotlib.lines import Line2D
+from matplotlib.patches import Patch
 from numpy.typing import NDArray
 
+from stackopt.band import Band, tolerance_band
 from stackopt.front import Front, FrontRow
 from stackopt.outputs import plot_style as style
-from stackopt.outputs.words import ends, totals_words, where_words, wrap_stack
+from stackopt.outputs.words import marked, totals_words, where_words, wrap_stack
 from stackopt.prediction import Prediction, predict
 from stackopt.problem import Problem, Stack
 
@@ -40,6 +42,17 @@ def write_trade_off(front: Front, path: str | os.PathLike[str]) -> None:
     style.save_figure(trade_off_figure(front), path)
 
 
+def write_curves(front: Front, path: str | os.PathLike[str]) -> None:
+    """Write the figure of `curves_figure`.
+
+    Raises
+    ------
+    InputError
+        When the file cannot be written.
+    """
+    style.save_figure(curves_figure(front), path)
+
+
 def write_prediction_plot(problem: Problem, stacks: Sequence[Stack], path: str | os.PathLike[str]) -> None:
     """Write the figure of `prediction_figure`.
 
@@ -61,7 +74,7 @@ def trade_off_figure(front: Front) -> Figure:
     """
     problem = front.problem
     pairs = list(itertools.combinations(problem.search.objectives, 2)) if front.rows else []
-    best = ends(front.rows, problem.search.objectives)
+    best = marked(front)
     labels = [_end_label(front, index, words) for index, words in best.items()]
     columns = min(math.ceil(len(pairs) / 3), 3)
     rows = math.ceil(len(pairs) / max(columns, 1))
@@ -83,6 +96,18 @@ def trade_off_figure(front: Front) -> Figure:
     return figure
 
 
+def curves_figure(front: Front) -> Figure:
+    """Draw the attenuation of the best stack of each objective and of the knee, large and for print."""
+    problem = front.problem
+    best = marked(front)
+    labels = [_end_label(front, index, words) for index, words in best.items()]
+    figure = style.new_figure(9.0, 4.2 * len(problem.requirements) + 0.8 + 0.18 * _count_lines(labels))
+    figure.suptitle(_heading(front, 90), fontsize=11)
+    _draw_requirements(figure, predict(problem, [front.rows[index].stack for index in best], SMOOTH), problem)
+    _legend(figure, labels)
+    return figure
+
+
 def prediction_figure(problem: Problem, stacks: Sequence[Stack]) -> Figure:
     """Draw the attenuation of stacks over each other, against the mask of each requirement.
 
@@ -96,8 +121,9 @@ def prediction_figure(problem: Problem, stacks: Sequence[Stack]) -> Figure:
     height = 3.6 * len(problem.requirements) + 0.8 + 0.18 * _count_lines(labels)
     figure = style.new_figure(9.0, height)
     figure.suptitle(style.wrapped(f"Predicted attenuation: {problem.title}", 90), fontsize=11)
-    _draw_requirements(figure, predict(problem, stacks, SMOOTH), problem)
-    _legend(figure, labels)
+    bands = [tolerance_band(problem, stack) for stack in stacks]
+    _draw_requirements(figure, predict(problem, stacks, SMOOTH), problem, bands)
+    _legend(figure, labels, shaded=any(bands))
     return figure
 
 
@@ -144,8 +170,13 @@ def _end_label(front: Front, index: int, words: str) -> str:
     return f"{words} (rank {index + 1}): {totals}, margin {row.margin_db:+.2f} dB {where}\n{stack}"
 
 
-def _draw_requirements(figure: Figure | SubFigure, predictions: Sequence[Prediction], problem: Problem) -> None:
-    """Draw the curves of all predictions into one set of axes for each requirement, below each other."""
+def _draw_requirements(
+    figure: Figure | SubFigure,
+    predictions: Sequence[Prediction],
+    problem: Problem,
+    bands: Sequence[Band | None] = (),
+) -> None:
+    """Draw the curves of all predictions, and bands, into one set of axes for each requirement, below each other."""
     count = len(problem.requirements)
     for number, axes in enumerate(np.ravel(figure.subplots(count, 1, squeeze=False))):
         requirement = problem.requirements[number]
@@ -153,8 +184,15 @@ def _draw_requirements(figure: Figure | SubFigure, predictions: Sequence[Predict
         axis = style.FrequencyAxis(grid)
         required = requirement.mask.required_db(grid)
         curves = [prediction.curves[number].attenuation_db for prediction in predictions]
-        everything = np.concatenate([required, *curves])
+        shades = {
+            index: _smooth_band(band, number, grid, curves[index])
+            for index, band in enumerate(bands)
+            if band is not None
+        }
+        everything = np.concatenate([required, *curves, *(end for ends in shades.values() for end in ends)])
         style.draw_mask(axes, axis, grid, required)
+        for index, (low, high) in shades.items():
+            style.draw_band(axes, axis, grid, style.measurable(low), style.measurable(high), index)
         for index, attenuation in enumerate(curves):
             style.draw_curve(axes, axis, grid, style.measurable(attenuation), index)
         axis.apply(axes)
@@ -164,7 +202,15 @@ def _draw_requirements(figure: Figure | SubFigure, predictions: Sequence[Predict
         axes.set_title(style.wrapped(f"{requirement.name} ({requirement.field.kind})", 70), fontsize=10, loc="left")
 
 
-def _legend(figure: Figure, labels: Sequence[str], points: Sequence[str] = ()) -> None:
+def _smooth_band(band: Band, number: int, grid: Real, attenuation_db: Real) -> tuple[Real, Real]:
+    """Bring a band from the search grid to the grid of a curve: its distance from the curve is what is smooth."""
+    place, known = (np.log10(np.maximum(hz, 1e-3)) for hz in (grid, band.frequency_hz[number]))
+    nominal = np.interp(known, place, attenuation_db)
+    low, high = (np.interp(place, known, end[number] - nominal) for end in (band.low_db, band.high_db))
+    return attenuation_db + np.minimum(low, 0.0), attenuation_db + np.maximum(high, 0.0)
+
+
+def _legend(figure: Figure, labels: Sequence[str], points: Sequence[str] = (), shaded: bool = False) -> None:
     """Put the legend below everything, where it covers nothing."""
     dot: dict[str, Any] = {
         "marker": "o",
@@ -172,8 +218,10 @@ def _legend(figure: Figure, labels: Sequence[str], points: Sequence[str] = ()) -
         "markerfacecolor": "#bbbbbb",
         "markeredgecolor": style.GREY,
     }
-    handles = [style.legend_line(number, label) for number, label in enumerate(labels)]
+    handles: list[Line2D | Patch] = [style.legend_line(number, label) for number, label in enumerate(labels)]
     handles += [Line2D([], [], label=label, **dot) for label in points]
+    if shaded:
+        handles.append(Patch(label="shaded: corners of the tolerances", facecolor=style.GREY, alpha=0.25))
     figure.legend(
         handles=[*handles, style.mask_patch()], loc="outside lower center", fontsize=9, frameon=False, handlelength=3.0
     )

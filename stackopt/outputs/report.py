@@ -12,12 +12,15 @@ import numpy as np
 from rich.console import Console
 
 from stackopt.compiled import MARGIN_SLACK_DB, CompiledProblem
+from stackopt.outputs import drives
+from stackopt.outputs.tolerances import assumption_words, scouted_words, tolerance_lines
 from stackopt.outputs.words import (
     count_words,
     field_words,
     length_words,
     margin_words,
     mask_words,
+    miss_words,
     totals_words,
     where_words,
 )
@@ -111,6 +114,7 @@ def _requirement(compiled: CompiledProblem, number: int) -> Iterator[tuple[str, 
     requirement = compiled.problem.requirements[number]
     yield "field", field_words(requirement.field)
     yield "mask", mask_words(requirement.mask)
+    yield from drives.requirement_lines(requirement)
     frequency = compiled.rows.frequency_hz[compiled.rows.requirement == number]
     yield (
         "grid",
@@ -198,6 +202,7 @@ def _search(problem: Problem) -> Iterator[tuple[str, str]]:
     yield "least", ", ".join(name for name in problem.search.objectives if name != "margin") or "-"
     if "margin" in problem.search.objectives:
         yield "largest", "margin"
+    yield "assume", assumption_words(problem)
     yield "random seed", str(problem.search.random_seed)
     yield "population", str(problem.search.population)
 
@@ -214,6 +219,8 @@ def show_verdicts(console: Console, problem: Problem, predictions: Sequence[Pred
     for number, prediction in enumerate(predictions, start=1):
         console.print(f"Stack {number}: {format_stack(prediction.row.stack)}", style="bold", soft_wrap=True)
         lines = [("mask", verdict_words(prediction, problem))]
+        lines += tolerance_lines(problem, prediction)
+        lines += drives.verdict_lines(prediction)
         lines.append(("totals", totals_words(prediction.row, problem.currency)))
         lines += [("breaks a rule", rule) for rule in prediction.broken]
         console.print(section_text(lines, console.width) + "\n", soft_wrap=True)
@@ -226,17 +233,6 @@ def verdict_words(prediction: Prediction, problem: Problem) -> str:
     if prediction.meets_mask:
         return f"meets the mask; smallest margin {smallest_margin_words(prediction)} {where}"
     return f"does not meet the mask; misses by {miss_words(row.margin_db)} {where}"
-
-
-def miss_words(margin_db: float) -> str:
-    """Write by how much a negative margin misses.
-
-    Examples
-    --------
-    >>> miss_words(-3.456), miss_words(-0.001)
-    ('3.46 dB', 'less than 0.01 dB')
-    """
-    return f"{-margin_db:.2f} dB" if margin_db <= -0.005 else "less than 0.01 dB"
 
 
 def smallest_margin_words(prediction: Prediction) -> str:
@@ -261,7 +257,8 @@ def _scouted(problem: Problem, scouted: Scouted, path: Path) -> list[tuple[str, 
         where += f" of '{scouted.requirement}'"
     if scouted.margin_db >= -MARGIN_SLACK_DB:
         answer, margin = "yes, for example by", f"{scouted.margin_db:.2f} dB to spare where it is tightest, {where}"
-        return [("answer", answer), ("stack", format_stack(scouted.stack)), ("margin", margin)]
+        lines = [("answer", answer), ("stack", format_stack(scouted.stack)), ("margin", margin)]
+        return lines + [("tolerances", text) for text in scouted_words(problem, scouted.stack)]
     return [
         ("answer", f"none was found by a quick look at {scouted.tried:,} stacks; to decide it: stackopt search {path}"),
         ("best", format_stack(scouted.stack)),

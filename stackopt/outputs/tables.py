@@ -25,6 +25,8 @@ if TYPE_CHECKING:
 
 PREDICTION_COLUMNS = ("requirement", "frequency_hz", "attenuation_db", "required_db", "margin_db")
 """Columns of a prediction's CSV; ``stack`` comes before them when there are several stacks."""
+BAND_COLUMNS = ("attenuation_low_db", "attenuation_high_db")
+"""Columns behind them where a material has a tolerance."""
 MAX_ROWS = 25
 """Longest front that the terminal shows in full."""
 _NARROWEST_STACK = 44
@@ -91,15 +93,21 @@ def prediction_frame(predictions: Sequence[Prediction]) -> pd.DataFrame:
     Returns
     -------
     pandas.DataFrame
-        Columns `PREDICTION_COLUMNS`, with ``stack`` before them when there are several predictions.
+        Columns `PREDICTION_COLUMNS`, with ``stack`` before them when there are several predictions, and `BAND_COLUMNS`
+        behind them when any prediction has a band; the others have their attenuation there.
     """
     import pandas as pd
 
     parts = []
+    has_bands = any(prediction.band is not None for prediction in predictions)
     for prediction in predictions:
-        for curve in prediction.curves:
+        band = prediction.band
+        for number, curve in enumerate(prediction.curves):
             values = (curve.frequency_hz, curve.attenuation_db, curve.required_db, curve.margin_db)
             part = pd.DataFrame(dict(zip(PREDICTION_COLUMNS[1:], values, strict=True)))
+            if has_bands:
+                ends = (curve.attenuation_db,) * 2 if band is None else (band.low_db[number], band.high_db[number])
+                part = part.assign(**dict(zip(BAND_COLUMNS, ends, strict=True)))
             part.insert(0, "requirement", curve.requirement)
             if len(predictions) > 1:
                 part.insert(0, "stack", format_stack(prediction.row.stack))
@@ -107,7 +115,7 @@ def prediction_frame(predictions: Sequence[Prediction]) -> pd.DataFrame:
     return pd.concat(parts, ignore_index=True)
 
 
-def front_text(front: Front, width: int, rest_in: str = "front.csv") -> str:
+def front_text(front: Front, width: int, rest_in: str = "front.csv", only: Sequence[int] | None = None) -> str:
     """Write a front as a table in plain text, shortened when it is long.
 
     Stacks stand at the end of their line, or below it where the line is too short for them.
@@ -119,8 +127,10 @@ def front_text(front: Front, width: int, rest_in: str = "front.csv") -> str:
         Characters of a terminal line.
     rest_in : str
         Where the full front is, told when rows are left out.
+    only : sequence of int, optional
+        Show exactly the rows of these indices.
     """
-    chosen = shown_rows(front)
+    chosen = shown_rows(front) if only is None else list(only)
     columns = _front_columns(front, chosen)
     widths = [max(map(len, column)) for column in columns]
     numbers = ["  ".join(map(str.rjust, cells, widths)) for cells in zip(*columns, strict=True)]
@@ -135,7 +145,9 @@ def front_text(front: Front, width: int, rest_in: str = "front.csv") -> str:
         lines.append(f"{head}  {parts.pop(0)}" if beside else head)
         lines += [" " * indent + part for part in parts]
     notes = [] if beside else ["Stacks are written from the source side to the victim side."]
-    return "\n".join(line.rstrip() for line in [*lines, "", *notes, *_front_notes(front, chosen, rest_in)])
+    if only is None:
+        notes += _front_notes(front, chosen, rest_in)
+    return "\n".join(line.rstrip() for line in [*lines, *([""] if notes else []), *notes])
 
 
 def _front_columns(front: Front, chosen: Sequence[int]) -> list[list[str]]:

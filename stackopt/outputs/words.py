@@ -7,7 +7,8 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from stackopt.front import FrontRow
+from stackopt.choice import knee
+from stackopt.front import Front, FrontRow
 from stackopt.physics.permeability import ColeCole, Constant, Debye, Lorentz, PermeabilityLaw, Sum, Table
 from stackopt.problem import (
     CoaxialDipoles,
@@ -30,8 +31,11 @@ ENDS = {
     "thickness": "thinnest",
     "sheets": "fewest sheets",
     "margin": "largest margin",
+    "heat": "coolest",
 }
 """What the best stack of each objective is called."""
+KNEE = "balanced"
+"""What the knee of a front is called."""
 
 
 def length_words(length_m: float) -> str:
@@ -77,6 +81,17 @@ def mask_words(mask: Mask) -> str:
     else:
         text = ", ".join(points)
     return text + (f"; {mask.margin_db:.4g} dB of margin on top" if mask.margin_db else "")
+
+
+def tolerance_words(down: float, up: float) -> str:
+    """Write a relative tolerance.
+
+    Examples
+    --------
+    >>> tolerance_words(-0.05, 0.05), tolerance_words(-0.5, 1.0)
+    ('±5 %', '-50 % to +100 %')
+    """
+    return f"±{up * 100:.3g} %" if up == -down else f"{down * 100:+.3g} % to {up * 100:+.3g} %"
 
 
 def number_words(value: float) -> str:
@@ -147,10 +162,28 @@ def margin_words(attenuation_db: float, required_db: float) -> str:
     return f"{attenuation_db - required_db:+.2f} dB"
 
 
+def miss_words(margin_db: float) -> str:
+    """Write by how much a negative margin misses.
+
+    Examples
+    --------
+    >>> miss_words(-3.456), miss_words(-0.001)
+    ('3.46 dB', 'less than 0.01 dB')
+    """
+    return f"{-margin_db:.2f} dB" if margin_db <= -0.005 else "less than 0.01 dB"
+
+
 def totals_words(row: FrontRow, currency: str) -> str:
     """Write mass, cost and thickness of a stack."""
     cost = "no price" if math.isnan(row.cost_per_m2) else f"{row.cost_per_m2:.2f} {currency}/m^2"
     return f"{row.mass_kg_per_m2:.3f} kg/m^2, {cost}, {row.thickness_m * 1e3:.3f} mm"
+
+
+def row_margin_words(row: FrontRow, problem: Problem) -> str:
+    """Write the smallest margin of a stack; beyond what can be measured only its lower bound."""
+    mask = next(requirement.mask for requirement in problem.requirements if requirement.name == row.requirement)
+    required = float(mask.required_db(np.array([row.tightest_hz]))[0])
+    return margin_words(row.margin_db + required, required)
 
 
 def where_words(row: FrontRow, problem: Problem) -> str:
@@ -215,3 +248,12 @@ def ends(rows: Sequence[FrontRow], objectives: Sequence[str]) -> dict[int, str]:
         values = [sign * row.objective(objective) for row in rows]
         names.setdefault(int(np.nanargmin(values)) if not np.all(np.isnan(values)) else 0, []).append(ENDS[objective])
     return {index: ", ".join(words) for index, words in names.items()}
+
+
+def marked(front: Front) -> dict[int, str]:
+    """Name the ends of a front and its knee (`stackopt.choice.knee`), by index."""
+    names = ends(front.rows, front.problem.search.objectives)
+    middle = knee(front.rows, front.problem.search.objectives)
+    if middle is not None:
+        names[middle] = ", ".join(filter(None, (names.get(middle), KNEE)))
+    return names

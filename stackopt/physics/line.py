@@ -37,7 +37,7 @@ def identity(shape: tuple[int, ...]) -> Chain:
     return Chain(one, zero, zero, one, np.zeros(shape))
 
 
-def scaled_sinh_over_u(u: Complex, thickness_m: float) -> Complex:
+def scaled_sinh_over_u(u: Complex, thickness_m: float | Real) -> Complex:
     """sinh(u d)/u * exp(-Re(u d)), in metres, exact for u = 0 too."""
     x = u * thickness_m
     small = np.abs(x) < 0.1
@@ -50,15 +50,15 @@ def scaled_sinh_over_u(u: Complex, thickness_m: float) -> Complex:
     return np.where(small, series, direct)
 
 
-def layer(u: Complex, series: Complex, shunt: Complex, thickness_m: float) -> Chain:
+def layer(u: Complex, series: Complex, shunt: Complex, thickness_m: float | Real) -> Chain:
     """Chain of one layer.
 
     Parameters
     ----------
     u, series, shunt : ndarray, complex, shape (frequency, line)
         Line constants, see `stackopt.physics.media.line_constants`.
-    thickness_m : float
-        Thickness of the layer.
+    thickness_m : float or ndarray
+        Thickness of the layer, or thicknesses that broadcast with the line constants.
     """
     x = u * thickness_m
     cosh = 0.5 * (np.exp(1j * x.imag) + np.exp(-2.0 * x.real - 1j * x.imag))

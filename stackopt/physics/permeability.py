@@ -130,11 +130,40 @@ class Table:
         return np.asarray(np.interp(position, knots, self.mu_real) + 1j * np.interp(position, knots, self.mu_imag))
 
 
+@dataclass(frozen=True)
+class Scaled:
+    """A law whose mu - 1 is multiplied by ``factor`` at every frequency.
+
+    A passive law stays passive and keeps its Kramers-Kronig relation, and where mu fades to 1 it still does.
+    """
+
+    law: PermeabilityLaw
+    factor: float
+
+    def __call__(self, frequency_hz: Real) -> Complex:
+        """Return the complex relative permeability, same shape as the frequencies (Hz)."""
+        return np.asarray(1.0 + self.factor * (self.law(frequency_hz) - 1.0))
+
+
 def tables_in(law: PermeabilityLaw) -> tuple[Table, ...]:
     """Return the tables that a law contains, itself or as terms of sums."""
     if isinstance(law, Sum):
         return tuple(table for term in law.terms for table in tables_in(term))
     return (law,) if isinstance(law, Table) else ()
+
+
+def initial_permeability(law: PermeabilityLaw) -> float:
+    """Real part at 0 Hz, or at the lowest frequency that all tables of the law reach.
+
+    Examples
+    --------
+    >>> initial_permeability(Debye(300.0, 1e4))
+    300.0
+    """
+    tables = tables_in(law)
+    lowest = max((table.frequency_hz[0] for table in tables), default=0.0)
+    lowest = min([lowest, *(table.octave_hz[1] for table in tables)])
+    return float(law(np.array([lowest]))[0].real)
 
 
 def kramers_kronig_deviation(table: Table) -> float:

@@ -6,6 +6,7 @@ import math
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 
+from stackopt.deviation import MOST_CORNERS, most_corners, too_many_corners, varying
 from stackopt.physics.permeability import Table, tables_in
 from stackopt.problem import (
     CoaxialDipoles,
@@ -14,6 +15,7 @@ from stackopt.problem import (
     Mask,
     Material,
     PlaneWave,
+    Problem,
     Requirement,
     SearchSettings,
     Sheet,
@@ -85,6 +87,22 @@ def check_draft(draft: Draft, source: Source) -> None:
     for _, requirement in draft.requirements:
         remarks.extend(_field_remarks(requirement))
         remarks.extend(_table_remarks(draft, requirement))
+    if not source.reading.findings:
+        _assumed(draft, source)
+
+
+def _assumed(draft: Draft, source: Source) -> None:
+    """Check that there is something to assume, and no more of it than can be tried; for drafts without mistakes."""
+    if draft.rules is None or draft.search is None or draft.search.assume == "nominal":
+        return
+    problem = Problem("", "", draft.materials, draft.use, (), draft.rules)
+    if not varying(problem, draft.present()):
+        source.reading.remarks.append(
+            f'assume = "{draft.search.assume}" changes nothing: no material of any stack has a tolerance that has an '
+            'effect; give the material set some, such as tolerance = {thickness = "8 %"}'
+        )
+    elif draft.search.assume == "worst" and (most := most_corners(problem)) > MOST_CORNERS:
+        source.add("search.assume", too_many_corners(most))
 
 
 def _sheets(draft: Draft) -> Iterator[Mistake]:

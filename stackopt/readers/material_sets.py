@@ -26,6 +26,7 @@ NUMBERS_WITH_ORIGIN = (
     "price_per_kg",
     "price_per_m2",
     "saturation",
+    "rayleigh",
     "anodic_index",
 )
 """Keys that need an origin as soon as they are given."""
@@ -52,6 +53,7 @@ class OriginTable(Structure):
     price_per_kg: v.Text | None = None
     price_per_m2: v.Text | None = None
     saturation: v.Text | None = None
+    rayleigh: v.Text | None = None
     anodic_index: v.Text | None = None
     tolerance: v.Text | None = None
 
@@ -68,6 +70,7 @@ class MaterialTable(Structure):
     price_per_kg: v.NotNegative | None = None
     price_per_m2: dict[str, v.NotNegative] | None = None
     saturation: v.FluxDensity | None = None
+    rayleigh: v.Rayleigh | None = None
     anodic_index: v.Potential | None = None
     tolerance: ToleranceTable = ToleranceTable()
     notes: v.Text | None = None
@@ -118,6 +121,7 @@ class MaterialTable(Structure):
             price_per_kg=self.price_per_kg,
             price_per_m2=tuple(sorted(prices.items())),
             saturation_t=self.saturation,
+            rayleigh_m_per_a=self.rayleigh,
             anodic_index_v=self.anodic_index,
             tolerance=Tolerance(self.tolerance.thickness, self.tolerance.conductivity, self.tolerance.permeability),
             notes=self.notes or "",

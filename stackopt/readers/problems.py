@@ -13,6 +13,7 @@ from pydantic import Field
 from stackopt.problem import Mask, MaterialSet, Problem, Requirement, SearchSettings, Sheet, Stack, StackRules
 from stackopt.readers import values as v
 from stackopt.readers.checks import Draft, check_draft
+from stackopt.readers.drives import DriveKeys, check_drives, outside_mask
 from stackopt.readers.fields import AnyField
 from stackopt.readers.files import Reading, Source, join_key, parse_toml
 from stackopt.readers.levels import required_curve
@@ -67,8 +68,8 @@ class MaskTable(Structure):
         return Mask(frequency, attenuation, self.margin, self.points_per_decade), remarks
 
 
-class RequirementTable(Structure):
-    """One field with its mask."""
+class RequirementTable(DriveKeys):
+    """One field with its mask, and what drives it."""
 
     name: v.Text | None = None
     field: AnyField
@@ -120,15 +121,25 @@ class SearchTable(Structure):
     objectives: Annotated[list[v.Objective], Field(min_length=1)] | None = None
     random_seed: v.Seed = SearchSettings.random_seed
     population: v.Population = SearchSettings.population
+    assume: v.Assumption = SearchSettings.assume
+    yield_goal: v.YieldGoal | None = None
 
     def mistakes(self) -> Iterator[tuple[str, str]]:
         """Yield key and message of values that do not fit together."""
         for number, name in _repeats(self.objectives or []):
             yield join_key("", ["objectives", number]), f"found {name!r} more than once; write each objective once"
+        if self.yield_goal is not None and self.assume != "yield":
+            yield "yield_goal", f'found with assume = "{self.assume}"; it needs assume = "yield", or leave it out'
 
     def build(self) -> SearchSettings:
         """Return the settings."""
-        return SearchSettings(tuple(self.objectives or SearchSettings.objectives), self.random_seed, self.population)
+        return SearchSettings(
+            tuple(self.objectives or SearchSettings.objectives),
+            self.random_seed,
+            self.population,
+            self.assume,
+            SearchSettings.yield_goal if self.yield_goal is None else self.yield_goal,
+        )
 
 
 def read_problem(path: str | os.PathLike[str], allow_outside: bool = False) -> Problem:
@@ -159,6 +170,7 @@ def read_problem(path: str | os.PathLike[str], allow_outside: bool = False) -> P
     head = validate(ProblemTable, data, source)
     draft = _draft(data, material_set, source)
     check_draft(draft, source)
+    check_drives(draft, source)
     reading.raise_findings()
     assert head is not None
     assert material_set is not None
@@ -236,6 +248,7 @@ def _requirements(entries: list[Any], source: Source) -> Iterator[tuple[str, Req
         names.add(name)
         mistakes = [(f"field.{key}", message) for key, message in table.field.mistakes()]
         mistakes += [(f"mask.{key}", message) for key, message in table.mask.mistakes()]
+        mistakes += table.drive_mistakes(table.field.build())
         for key, message in mistakes:
             source.add(f"{prefix}.{key}", message)
         if not mistakes:
@@ -252,7 +265,12 @@ def _requirement(name: str, prefix: str, table: RequirementTable, source: Source
         source.add(f"{prefix}.mask.allowed", str(error))
         return
     source.reading.remarks.extend(f"{name}: {remark}" for remark in remarks)
-    yield prefix, Requirement(name, table.field.build(), built)
+    field = table.field.build()
+    drive = table.build_drive(field)
+    if drive is not None:
+        for message in outside_mask(drive, built):
+            source.add(f"{prefix}.drive", message)
+    yield prefix, Requirement(name, field, built, drive)
 
 
 def _check_mask_source(mask: Mapping[str, Any], key: str, source: Source) -> None:

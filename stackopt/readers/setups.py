@@ -5,7 +5,8 @@ from __future__ import annotations
 import os
 import re
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
+from dataclasses import field as entry_field
 from functools import partial
 from pathlib import Path
 from typing import Annotated, Any
@@ -81,8 +82,8 @@ class Setup:
     uncertainty: Uncertainty = Uncertainty()
     conductivity_s_per_m: float | None = None
     permeability: PermeabilityLaw | None = None
-    entry: Mapping[str, Any] = field(default_factory=dict)
-    origin: Mapping[str, str] = field(default_factory=dict)
+    entry: Mapping[str, Any] = entry_field(default_factory=dict)
+    origin: Mapping[str, str] = entry_field(default_factory=dict)
     date: str | None = None
 
 

@@ -94,8 +94,11 @@ def parse_size(text: str) -> tuple[float, float]:
     """
     match = _SIZE.fullmatch(text.strip())
     if match is None:
-        raise ValueError(f"found {show(text)}; write two sides with their units, such as {_EXAMPLE_SIZE}")
-    sides = tuple(parse_quantity(side.strip(), "length") for side in match.groups())
+        raise ValueError(f"found {show(text)}; write two lengths with their units, such as {_EXAMPLE_SIZE}")
+    try:
+        sides = tuple(parse_quantity(side.strip(), "length") for side in match.groups())
+    except ValueError:
+        raise ValueError(f"found {show(text)}; write two lengths with their units, such as {_EXAMPLE_SIZE}") from None
     if not all(1e-3 <= side <= 100.0 for side in sides):
         raise ValueError(f"found {show(text)}; each side must be at least 1 mm and at most 100 m")
     return sides[0], sides[1]

@@ -11,7 +11,7 @@ from pydantic_core import PydanticCustomError
 
 from stackopt.errors import InputError
 from stackopt.physics.permeability import Table
-from stackopt.problem import OBJECTIVES
+from stackopt.problem import ASSUMPTIONS, OBJECTIVES
 from stackopt.readers.files import Source, nearest
 from stackopt.readers.tables import LEVEL_COLUMNS, MASK_COLUMNS, Curve, parse_table, permeability_table
 from stackopt.units import UNITS, parse_quantity, show
@@ -124,14 +124,23 @@ def _point(value: object) -> tuple[float, float]:
     return _quantity("frequency", "0 Hz")(value[0]), _quantity("level", "0 dB")(value[1])
 
 
+def _drive_point(value: object) -> tuple[float, object]:
+    if not isinstance(value, list) or len(value) != 2:
+        raise ValueError(
+            f'found {show(value)}; write a point of the drive as a frequency and a peak, such as ["100 kHz", "12 A"]'
+        )
+    return _quantity("frequency", "0 Hz")(value[0]), value[1]
+
+
 def _tolerance(value: object) -> tuple[float, float]:
     if isinstance(value, list):
         if len(value) != 2:
             raise ValueError(f'found {show(value)}; write two values, down and up, such as ["-50 %", "+100 %"]')
         down, up = parse_quantity(value[0], "ratio"), parse_quantity(value[1], "ratio")
-        if not -1.0 < down <= 0.0 <= up:
+        if not -1.0 < down <= 0.0 <= up <= 1.0:
             raise ValueError(
-                f"found {show(value)}; the first must be above -100 % and at most 0 %, the second at least 0 %"
+                f"found {show(value)}; the first must be above -100 % and at most 0 %, the second at least 0 % and at "
+                "most +100 %"
             )
         return down, up
     size = parse_quantity(value, "ratio")
@@ -190,6 +199,8 @@ Text = Annotated[str, PlainValidator(_text)]
 Flag = Annotated[bool, PlainValidator(_flag)]
 Name = Annotated[str, PlainValidator(check_name)]
 Objective = Annotated[str, PlainValidator(_word(*OBJECTIVES))]
+Assumption = Annotated[str, PlainValidator(_word(*ASSUMPTIONS))]
+YieldGoal = Annotated[float, PlainValidator(_quantity("ratio", "50 %", "99.9 %"))]
 Polarisation = Annotated[str, PlainValidator(_word("TE", "TM"))]
 Thickness = Annotated[float, PlainValidator(read_thickness)]
 Distance = Annotated[float, PlainValidator(_quantity("length", "0 mm", above=True))]
@@ -212,6 +223,12 @@ Seed = Annotated[int, PlainValidator(_integer(0, 2**32 - 1))]
 Population = Annotated[int, PlainValidator(_integer(10, 100_000))]
 Layer = Annotated[tuple[str, float], PlainValidator(_layer)]
 Point = Annotated[tuple[float, float], PlainValidator(_point)]
+DrivePoint = Annotated[tuple[float, Any], PlainValidator(_drive_point)]
+Fraction = Annotated[float, PlainValidator(_quantity("ratio", "0 %", "100 %", above=True))]
+Change = Annotated[float, PlainValidator(_quantity("ratio", "0 %", above=True))]
+Power = Annotated[float, PlainValidator(_quantity("power", "0 W", above=True))]
+Inductance = Annotated[float, PlainValidator(_quantity("inductance", "0 H", above=True))]
+Rayleigh = Annotated[float, PlainValidator(_quantity("rayleigh coefficient", "0 m/A"))]
 TolerancePair = Annotated[tuple[float, float], PlainValidator(_tolerance)]
 MaskCurve = Annotated[Curve, PlainValidator(_curve(MASK_COLUMNS))]
 LevelCurve = Annotated[Curve, PlainValidator(_curve(LEVEL_COLUMNS))]

@@ -15,7 +15,7 @@ from stackopt.problem import Problem, Stack
 ROUGH_DB = 2.0
 """Quadrature error that these problems are compiled to: kernel and oracle share the lines, whatever the rule."""
 
-patient = settings(max_examples=40, suppress_health_check=[HealthCheck.too_slow])
+patient = settings(max_examples=25, suppress_health_check=[HealthCheck.too_slow])
 
 
 def random_codes(compiled: CompiledProblem, seed: int, count: int) -> np.ndarray:
@@ -85,6 +85,7 @@ def test_predictions_are_the_loop(problem: Problem, seed: int) -> None:
             np.testing.assert_array_equal(evaluate.attenuation(problem, [stack], number)[0], expected)
 
 
+@patient
 @given(problems(plane_wave_requirements), st.integers(0, 2**32 - 1), st.data())
 def test_sums_do_not_depend_on_the_order(problem: Problem, seed: int, data: st.DataObject) -> None:
     """Integers to the last digit, bonds and handling included."""

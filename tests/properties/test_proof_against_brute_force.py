@@ -25,7 +25,7 @@ from stackopt.compiled import CompiledProblem, compile_problem
 from stackopt.equals import equal_stacks
 from stackopt.explore import Explorer
 from stackopt.problem import CoaxialLoops, Mask, PlaneWave, Problem, Sheet, Stack
-from stackopt.prove import Prover, Tally, count_stacks, mirror_holds, why_not_provable
+from stackopt.prove import Collector, Prover, Tally, count_stacks, mirror_holds, why_not_provable
 from stackopt.stock import Stock
 
 Integers = NDArray[np.int64]
@@ -78,6 +78,12 @@ def rows_of(prover: Prover) -> list[Vector]:
     return [tuple(vector) for vector in prover.archive.values.tolist()]
 
 
+def demand(compiled: CompiledProblem, codes: Integers) -> NDArray[np.bool_]:
+    """Met by about half of the stacks, and by a mirror image wherever by the stack."""
+    assert compiled.problem.title == "Invented"
+    return np.asarray((codes**2).sum(axis=1) % 7 < 4)
+
+
 def check_members(case: Case, prover: Prover) -> None:
     """Every member is a feasible stack that reaches its objectives."""
     for stack, vector in zip(evaluate.decode(case.compiled, prover.archive.codes), rows_of(prover), strict=True):
@@ -127,6 +133,38 @@ class TestAgainstEveryStack:
         expected = {(number[vector], stack) for stack, vector in case.feasible.items() if vector in number}
         assert len(found) == len(set(found))
         assert set(found) == expected
+
+    @pytest.mark.parametrize("room", [2, 20_000])
+    def test_further_demands(self, case: Case, room: int, monkeypatch: pytest.MonkeyPatch) -> None:
+        """A demand that follows no order at all; and a share that has room for few candidates is tried again."""
+        monkeypatch.setattr("stackopt.prove.CANDIDATES", room)
+        monkeypatch.setattr("stackopt.demands.demands_of", lambda _: (demand,))
+        kept = demand(case.compiled, evaluate.encode(case.compiled, list(case.feasible)))
+        feasible = {stack: vector for (stack, vector), good in zip(case.feasible.items(), kept, strict=True) if good}
+        front = brute_force.front_of(list(feasible.values()))
+        prover = start(case.compiled)
+        assert prover.run()
+        assert rows_of(prover) == front
+        check_members(replace(case, feasible=feasible), prover)
+
+    @pytest.mark.parametrize("within", [0.0, 0.15])
+    def test_alternatives(self, case: Case, within: float) -> None:
+        """Every feasible stack that no member of the front beats by more than the factor in all objectives at once."""
+        values = np.array(case.front, dtype=np.int64).reshape(-1, len(case.problem.search.objectives))
+        collector = Collector(case.compiled, values, within)
+        assert collector.run(2)
+        assert not collector.overflowed
+        stacks = evaluate.decode(case.compiled, collector.codes)
+        expected = {
+            stack
+            for stack, vector in case.feasible.items()
+            if not any(
+                all(mine > best * (1.0 + within) for mine, best in zip(vector, member, strict=True))
+                for member in case.front
+            )
+        }
+        assert len(stacks) == len(set(stacks))
+        assert set(stacks) == expected
 
 
 @pytest.mark.parametrize("seed", [*SMALL[::10], *DEEP[:3]])

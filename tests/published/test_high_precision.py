@@ -201,6 +201,7 @@ def layers_of(stack: tuple[Sheet, ...]) -> list[Layer]:
     ]
 
 
+@pytest.mark.slow
 @pytest.mark.parametrize(
     "field",
     [
@@ -237,6 +238,7 @@ def test_automatically_chosen_rules(field: CoaxialDipoles | CoaxialLoops) -> Non
     assert fine[number, row] == pytest.approx(expected, abs=1e-5)
 
 
+@pytest.mark.slow
 def test_automatically_chosen_rule_where_slabs_guide_waves() -> None:
     h = 50e-3
     highest = 3.0 / h * SPEED_OF_LIGHT / (2.0 * np.pi)

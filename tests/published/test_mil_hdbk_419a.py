@@ -10,6 +10,7 @@ less 20 log10(1 + d/2r).
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 import pytest
@@ -27,28 +28,28 @@ R_TABLE = 0.305
 INCHES = R_TABLE / 0.0254
 
 
-def absorption_db(t, f, mu=1.0, g=1.0):
+def absorption_db(t: float, f: float, mu: float = 1.0, g: float = 1.0) -> float:
     return 131.4 * t * math.sqrt(f * mu * g)
 
 
-def magnetic_reflection_db(f, r, mu=1.0, g=1.0):
+def magnetic_reflection_db(f: float, r: float, mu: float = 1.0, g: float = 1.0) -> float:
     s = math.sqrt(f * g / mu)
     return 20.0 * math.log10(0.0117 / (r * s) + 5.35 * r * s + 0.354)
 
 
-def electric_reflection_db(f, r_inches, mu=1.0, g=1.0):
+def electric_reflection_db(f: float, r_inches: float, mu: float = 1.0, g: float = 1.0) -> float:
     return 353.6 + 10.0 * math.log10(g / (mu * f**3 * r_inches**2))
 
 
-def plane_reflection_db(f, mu=1.0, g=1.0):
+def plane_reflection_db(f: float, mu: float = 1.0, g: float = 1.0) -> float:
     return 168.0 + 10.0 * math.log10(g / (mu * f))
 
 
-def metal_impedance(f, mu=1.0, g=1.0):
+def metal_impedance(f: float, mu: float = 1.0, g: float = 1.0) -> complex:
     return np.sqrt(2j * np.pi * f * mu * MU_0 / (COPPER * g))
 
 
-def re_reflection_db(f, t, wave_impedance, mu=1.0, g=1.0):
+def re_reflection_db(f: float, t: float, wave_impedance: complex, mu: float = 1.0, g: float = 1.0) -> float:
     metal = metal_impedance(f, mu, g)
     gamma = ((metal - wave_impedance) / (metal + wave_impedance)) ** 2
     loss = absorption_db(t, f, mu, g)
@@ -56,17 +57,17 @@ def re_reflection_db(f, t, wave_impedance, mu=1.0, g=1.0):
     return 20.0 * math.log10(abs(1.0 - gamma * 10.0 ** (-loss / 10.0) * turn))
 
 
-def magnetic_impedance(f, r):
+def magnetic_impedance(f: float, r: float) -> complex:
     """Near field of a loop as the handbook has it, ohm."""
     return 2j * np.pi * f * MU_0 * r
 
 
-def electric_impedance(f, r):
+def electric_impedance(f: float, r: float) -> complex:
     """Near field of a short dipole as the handbook has it, ohm."""
     return ETA_0 / (1j * free_wavenumber(f) * r)
 
 
-def chain_db(f, t, wave_impedance, mu=1.0, g=1.0):
+def chain_db(f: float, t: float, wave_impedance: complex, mu: float = 1.0, g: float = 1.0) -> float:
     """-20 log10 |T| of a sheet between equal wave impedances (ohm), by stackopt."""
     frequency = np.array([float(f)])
     chain = line.medium_chain(medium(frequency, mu, COPPER * g), t, np.zeros((1, 1), complex), frequency, "TE")
@@ -75,7 +76,7 @@ def chain_db(f, t, wave_impedance, mu=1.0, g=1.0):
     return float(line.DB_PER_NEPER * (log_scale - np.log(np.abs(value)))[0, 0])
 
 
-def thick_sheet_reflection_db(f, wave_impedance, mu=1.0, g=1.0):
+def thick_sheet_reflection_db(f: float, wave_impedance: complex, mu: float = 1.0, g: float = 1.0) -> float:
     """Reflection loss by stackopt: of a sheet of 12 skin depths, which reflects nothing twice, less its absorption."""
     delta = float(skin_depth(np.array([f]), mu, COPPER * g)[0])
     return chain_db(f, 12.0 * delta, wave_impedance, mu, g) - 12.0 * line.DB_PER_NEPER
@@ -112,12 +113,12 @@ ENTRIES = [
 ]
 
 
-def metal_values(metal, f):
+def metal_values(metal: str, f: float) -> tuple[float, float]:
     return {"iron": (IRON_MU[f], 0.17), "copper": (1.0, 1.0), "aluminium": (1.0, 0.61)}[metal]
 
 
 @pytest.mark.parametrize(("f", "metal", "wave", "printed"), ENTRIES)
-def test_reflection_equations_give_table_8_4(f, metal, wave, printed):
+def test_reflection_equations_give_table_8_4(f: float, metal: str, wave: str, printed: float) -> None:
     """The transcription of the equations above is the one that the table was made with."""
     mu, g = metal_values(metal, f)
     loss = {
@@ -129,7 +130,7 @@ def test_reflection_equations_give_table_8_4(f, metal, wave, printed):
 
 
 @pytest.mark.parametrize(("f", "metal", "wave", "printed"), ENTRIES)
-def test_reflection_of_thick_sheets_is_table_8_4(f, metal, wave, printed):
+def test_reflection_of_thick_sheets_is_table_8_4(f: float, metal: str, wave: str, printed: float) -> None:
     """The cascade between the handbook's own wave impedances."""
     mu, g = metal_values(metal, f)
     impedance = {"H": magnetic_impedance(f, R_TABLE), "E": electric_impedance(f, R_TABLE), "plane": ETA_0}[wave]
@@ -137,7 +138,7 @@ def test_reflection_of_thick_sheets_is_table_8_4(f, metal, wave, printed):
 
 
 @pytest.mark.parametrize(("f", "metal", "wave", "printed"), [entry for entry in ENTRIES if entry[2] != "plane"])
-def test_reflection_in_the_full_near_fields(f, metal, wave, printed):
+def test_reflection_in_the_full_near_fields(f: float, metal: str, wave: str, printed: float) -> None:
     """The near-field kinds use the full radial formula: the table's values well inside the transition r = lambda/2pi.
 
     At 100 MHz r is 0.64 of the transition, where the field is neither: values lie between near field and plane wave.
@@ -156,7 +157,9 @@ def test_reflection_in_the_full_near_fields(f, metal, wave, printed):
 
 @pytest.mark.parametrize("metal", ["iron", "copper", "aluminium"])
 @pytest.mark.parametrize("make", [fields.magnetic_near_field_lines, fields.electric_near_field_lines])
-def test_beyond_the_transition_the_near_fields_are_a_plane_wave(metal, make):
+def test_beyond_the_transition_the_near_fields_are_a_plane_wave(
+    metal: str, make: Callable[..., fields.SpectralLines]
+) -> None:
     """MIL-HDBK-419A's rule: the plane-wave equation holds above r = lambda/2pi.
 
     At x times that distance the radial formula departs from the impedance of free space by a factor 1 + 1/x^2 to
@@ -190,12 +193,12 @@ RE_REFLECTION = [
 ]
 
 
-def impedance_8_6(wave, f):
+def impedance_8_6(wave: str, f: float) -> complex:
     return magnetic_impedance(f, 0.3048) if wave == "H" else complex(ETA_0)
 
 
 @pytest.mark.parametrize(("mil", "wave", "f", "printed"), RE_REFLECTION)
-def test_re_reflection_is_table_8_6(mil, wave, f, printed):
+def test_re_reflection_is_table_8_6(mil: int, wave: str, f: float, printed: float) -> None:
     """What the cascade has beyond A and the reflection loss of a thick sheet is the handbook's C."""
     t, impedance = mil * MIL, impedance_8_6(wave, f)
     assert re_reflection_db(f, t, impedance) == pytest.approx(printed, abs=0.05)
@@ -203,7 +206,7 @@ def test_re_reflection_is_table_8_6(mil, wave, f, printed):
     assert rest == pytest.approx(printed, abs=0.05)
 
 
-def test_absorption_is_8_686_db_a_skin_depth():
+def test_absorption_is_8_686_db_a_skin_depth() -> None:
     """MIL-HDBK-419A: A = 131.4 t sqrt(f mu g) = 8.686 t/delta."""
     for f, mu, g in ((60.0, 1000.0, 0.17), (1e4, 1.0, 1.0), (1e6, 1.0, 0.61)):
         delta = float(skin_depth(np.array([f]), mu, COPPER * g)[0])
@@ -222,7 +225,7 @@ SHEETS = [
 
 @pytest.mark.parametrize(("f", "t", "mu", "g"), SHEETS)
 @pytest.mark.parametrize("r", [0.02, 0.305, 2.0])
-def test_a_plus_r_plus_c_is_the_cascade(f, t, mu, g, r):
+def test_a_plus_r_plus_c_is_the_cascade(f: float, t: float, mu: float, g: float, r: float) -> None:
     """With unrounded coefficients to 0.01 dB; the printed ones, 0.0117, 5.35 and 0.354, are these to three digits."""
     unit = math.sqrt(2.0 * math.pi * MU_0 * COPPER)
     one_metre, across = 1.0 / (4.0 * unit), unit / 4.0
@@ -239,7 +242,7 @@ def test_a_plus_r_plus_c_is_the_cascade(f, t, mu, g, r):
 
 
 @pytest.mark.parametrize(("f", "t", "mu", "g"), SHEETS)
-def test_insertion_loss_is_less_by_the_air_that_the_sheet_takes_the_place_of(f, t, mu, g):
+def test_insertion_loss_is_less_by_the_air_in_the_place_of_the_sheet(f: float, t: float, mu: float, g: float) -> None:
     r, frequency = 0.02, np.array([f])
     sheet = [(medium(frequency, mu, COPPER * g), t)]
     near = fields.attenuation_db(fields.magnetic_near_field_lines(frequency, r), sheet)[0]

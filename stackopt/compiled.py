@@ -49,6 +49,9 @@ MARGIN_SLACK_DB = 1e-9
 QUADRATURE_ERROR_DB = 0.02
 _LARGEST_EXPONENT = 320.0  # nepers between the lines of a row; its square stays inside the range of doubles
 
+_AT_A_TIME = 4096
+"""Lines of all frequencies of the sheets that are tabulated together: many small arrays cost more than a larger one."""
+
 
 @dataclass(frozen=True)
 class Quadrature:
@@ -365,11 +368,14 @@ def _sheet_tables(problem: Problem, rows: Rows, sheets: Stack) -> SheetTables:
     bare, bonded = _Tabulator(len(sheets), rows), _Tabulator(len(sheets), rows)
     for lines in rows.spectra:
         chains = _Chains(problem, lines)
-        for number, sheet in enumerate(sheets):
-            chain = chains.of(sheet)
-            bare.add(number, chain, lines, limit)
+        step = max(1, _AT_A_TIME // lines.k.size)
+        for start in range(0, len(sheets), step):
+            part = sheets[start : start + step]
+            chain, many = chains.of(part), chains.repeated(len(part))
+            bare.add(start, len(part), chain, many, limit)
             if bond is not None:
-                bonded.add(number, line.cascade((chains.of(bond), chain), lines.k.shape), lines, limit)
+                both = line.cascade((chains.of((bond,) * len(part)), chain), many.k.shape)
+                bonded.add(start, len(part), both, many, limit)
         bare.next_requirement(lines)
         bonded.next_requirement(lines)
     first = bare.flat()
@@ -385,7 +391,8 @@ class _Tabulator:
         self.scale = np.empty((sheets, len(rows.frequency_hz)))
         self.row = self.column = 0
 
-    def add(self, number: int, chain: line.Chain, lines: fields.SpectralLines, limit: float) -> None:
+    def add(self, start: int, count: int, chain: line.Chain, lines: fields.SpectralLines, limit: float) -> None:
+        """Add sheets from number ``start`` on, which follow each other in the chain and the lines."""
         scale, factor = _row_scale(chain.log_scale, lines, limit)
         blocks = pack_blocks(
             (chain.a * factor, 1.0),
@@ -393,8 +400,10 @@ class _Tabulator:
             (chain.c * lines.terminal * factor, 0.0),
             (chain.d * factor, 1.0),
         )
-        self.table[number, self.column : self.column + len(blocks)] = blocks
-        self.scale[number, self.row : self.row + len(scale)] = scale
+        here = slice(start, start + count)
+        blocks, scale = blocks.reshape(count, -1), scale.reshape(count, -1)
+        self.table[here, self.column : self.column + blocks.shape[1]] = blocks
+        self.scale[here, self.row : self.row + scale.shape[1]] = scale
 
     def next_requirement(self, lines: fields.SpectralLines) -> None:
         frequencies, count = lines.k.shape
@@ -406,19 +415,33 @@ class _Tabulator:
 
 
 class _Chains:
-    """Chains of sheets in one field; the line constants of a material are computed once for all its gauges."""
+    """Chains of sheets in one field; the line constants of a material are computed once for all its gauges.
+
+    Sheets are computed several at a time, the frequencies of one after those of the other.
+    """
 
     def __init__(self, problem: Problem, lines: fields.SpectralLines) -> None:
         self.problem, self.lines = problem, lines
         self.constants: dict[str, tuple[line.Complex, line.Complex, line.Complex]] = {}
 
-    def of(self, sheet: Sheet) -> line.Chain:
+    def repeated(self, count: int) -> fields.SpectralLines:
+        """Return the lines as often as there are sheets."""
+        lines = self.lines
+        k, terminal, weight = (np.tile(part, (count, 1)) for part in (lines.k, lines.terminal, lines.weight))
+        return fields.SpectralLines(np.tile(lines.frequency_hz, count), k, terminal, weight, lines.polarisation)
+
+    def of(self, sheets: Stack) -> line.Chain:
+        u, series, shunt = (np.concatenate(parts) for parts in zip(*map(self._constants, sheets), strict=True))
+        thickness = np.repeat([sheet.thickness_m for sheet in sheets], len(self.lines.frequency_hz))
+        return line.layer(u, series, shunt, thickness[:, None])
+
+    def _constants(self, sheet: Sheet) -> tuple[line.Complex, line.Complex, line.Complex]:
         if sheet.material not in self.constants:
             ((medium, _),) = media(self.problem, (sheet,), self.lines.frequency_hz)
             self.constants[sheet.material] = line_constants(
                 medium, self.lines.k, self.lines.frequency_hz, self.lines.polarisation
             )
-        return line.layer(*self.constants[sheet.material], sheet.thickness_m)
+        return self.constants[sheet.material]
 
 
 def _row_scale(log_scale: Real, lines: fields.SpectralLines, limit: float) -> tuple[Real, Real]:

@@ -69,11 +69,11 @@ def decisive_margins(
     assume = compiled.problem.search.assume
     if assume == "nominal" or len(codes) == 0:
         return margin_db, row
-    worst = tolerances_of(compiled).worst_margins(codes)
-    if assume == "worst":
-        return worst.margin_db, worst.row
-    missed = ~meets_assumption(compiled, codes)
-    return np.where(missed, np.minimum(worst.margin_db, margin_db), margin_db), np.where(missed, worst.row, row)
+    asked = np.ones(len(codes), dtype=bool) if assume == "worst" else ~meets_assumption(compiled, codes)
+    worst = tolerances_of(compiled).worst_margins(codes[asked])
+    margin_db, row = margin_db.copy(), row.copy()
+    margin_db[asked], row[asked] = worst.margin_db, worst.row
+    return margin_db, row
 
 
 def extra_columns(compiled: CompiledProblem, codes: Integers) -> list[dict[str, float | str]]:

@@ -197,7 +197,9 @@ def _state(problem: Problem, requirement: Requirement, drive: Drive, keys: list[
             )
         )
     relative = mutual.real * _turns_squared_over_inductance(drive)
-    return DriveState(frequency, peak, tuple(states), mutual.real, 0.0 - 2.0 * math.pi * frequency * mutual.imag, relative)
+    return DriveState(
+        frequency, peak, tuple(states), mutual.real, 0.0 - 2.0 * math.pi * frequency * mutual.imag, relative
+    )
 
 
 def _turns_squared_over_inductance(drive: Drive) -> float:

@@ -31,7 +31,10 @@ def page(
     run: RunFolder,
     out: Annotated[Path | None, typer.Option(metavar="FILE", help="HTML file; RUN/trade_off.html if left out.")] = None,
 ) -> None:
-    """Write the trade-off page of a run: one HTML file to look at, narrow and compare its stacks."""
+    """Write the trade-off page of a run.
+
+    One HTML file, without any network, to look at the stacks, narrow them by limits, and compare a few.
+    """
     from stackopt.outputs.console import make_console
     from stackopt.outputs.page import write_page
     from stackopt.outputs.report import short_path

@@ -26,7 +26,7 @@ from stackopt.outputs.plots import write_curves, write_trade_off
 from stackopt.outputs.tables import write_alternatives, write_equals, write_front
 from stackopt.problem import Problem
 from stackopt.readers import read_problem
-from stackopt.search import Search
+from stackopt.phases import Search
 from stackopt.status import Status, Watcher
 
 CHECKPOINT_EVERY_S = 30.0

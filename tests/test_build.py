@@ -1,4 +1,5 @@
 import dataclasses
+import itertools
 import math
 import re
 from pathlib import Path
@@ -194,12 +195,12 @@ def test_wrong_sizes_say_what_to_write(text: str) -> None:
 
 def test_lines_of_text_of_thin_layers_do_not_overlap() -> None:
     problem = build_problem(max_sheets=9, bond=film(5.0))
-    stack = tuple(Sheet("copper", 9e-6) for _ in range(5)) + (Sheet("steel", 1e-3),)
+    stack = (*[Sheet("copper", 9e-6)] * 5, Sheet("steel", 1e-3))
     sheet = build.make_build_sheet(make_front(problem, [stack]), 1)
     figure = section_figure(sheet)
     figure.canvas.draw()
     boxes = [text.get_window_extent() for text in figure.axes[0].texts]
     assert len(boxes) == 11
-    for upper, lower in zip(boxes, boxes[1:], strict=False):
+    for upper, lower in itertools.pairwise(boxes):
         assert not upper.overlaps(lower)
     assert all(box.y0 >= 0 and box.x1 <= figure.bbox.x1 for box in boxes)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import ast
 import json
 import re
 import shutil
@@ -18,13 +19,21 @@ import stackopt
 from stackopt import cli
 from stackopt.front import COLUMNS
 from stackopt.readers import read_material_set
+from stackopt.readers.setups import read_setup
 
 ROOT = Path(__file__).parent.parent
 DOCUMENTS = ("README.md", "DEVELOPERS.md", "results/README.md")
 EXAMPLE = ROOT / "results" / "example"
 PLACES = (ROOT, ROOT / "stackopt", EXAMPLE)
 """Where a path in a document may start."""
-MADE_BY_RUNS = {"results/coil_beside_sensor-1/", "alternatives.csv", "checkpoint-*.npz"}
+MADE_BY_RUNS = {
+    "results/coil_beside_sensor-1/",
+    "alternatives.csv",
+    "curves.png",
+    "trade_off.html",
+    "pick-*/",
+    "checkpoint-*.npz",
+}
 """What a document may name although the repository does not hold it."""
 FENCE = re.compile(r"^```(\w+)\n(.*?)^```$", re.MULTILINE | re.DOTALL)
 PATH = re.compile(r"[\w.*-]*(?:/[\w.*-]+)*(?:/|\.(?:py|toml|csv|md|png|json|npz))")
@@ -110,6 +119,13 @@ def test_the_example_material_set_reads(tmp_path: Path) -> None:
     assert not known.remarks
 
 
+def test_the_example_setup_reads(tmp_path: Path) -> None:
+    folder = shutil.copytree(ROOT / "problems" / "bench_demo", tmp_path / "bench")
+    path = folder / "example.toml"
+    path.write_text(next(block for block in blocks("README.md", "toml") if "[[sweep]]" in block), "utf-8")
+    assert [entry.count for entry in read_setup(path).sweeps] == [1, 2]
+
+
 @pytest.mark.slow
 def test_the_python_example_runs(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.chdir(ROOT)
@@ -149,6 +165,30 @@ def test_every_module_has_its_line_for_developers() -> None:
     modules = {path.relative_to(ROOT / "stackopt").as_posix() for path in (ROOT / "stackopt").rglob("*.py")}
     unnamed = {name for name in modules if Path(name).name != "__init__.py" or name == "__init__.py"} - spans
     assert not unnamed
+
+
+def imported_modules(path: Path) -> set[str]:
+    """Modules of the package that a module imports, anywhere in it, as they stand in the table for developers."""
+    found = set()
+    for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+        if isinstance(node, ast.ImportFrom) and (node.module or "").split(".")[0] == "stackopt":
+            inside = "/".join((node.module or "").split(".")[1:])
+            found |= {f"{inside}/{alias.name}.py".lstrip("/") for alias in node.names} | {f"{inside}.py"}
+    return {name for name in found if (ROOT / "stackopt" / name).is_file()}
+
+
+def test_modules_import_from_rows_above_their_own_only() -> None:
+    table = text_of("DEVELOPERS.md").split("## Map of the code")[1].split("\n## ")[0]
+    rows = re.findall(r"^\| (`[^|]*\.py`) \|", table, re.MULTILINE)
+    place = {name: number for number, row in enumerate(rows) for name in re.findall(r"`([^`]+)`", row)}
+    wrong = [
+        f"{name} imports {other}"
+        for name in place
+        if name != "__init__.py" and (ROOT / "stackopt" / name).is_file()
+        for other in imported_modules(ROOT / "stackopt" / name)
+        if place.get(other, -1) > place[name]
+    ]
+    assert not wrong
 
 
 def test_every_dependency_has_its_reason() -> None:

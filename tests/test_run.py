@@ -23,15 +23,16 @@ from stackopt.run import RunOptions, RunResult, input_hash, prove_run, read_reco
 from stackopt.runs import read_run
 from stackopt.status import Status
 
-FIRST_LINES = {
+CHANGES = {
     'points = [["50 Hz", "8 dB"], ["1 kHz", "14 dB"], ["1 MHz", "90 dB"]]': (
-        'points = [["1 kHz", "8 dB"], ["1 MHz", "70 dB"]]\npoints_per_decade = 1'
+        'points = [["1 kHz", "10 dB"], ["1 MHz", "75 dB"]]\npoints_per_decade = 1'
     ),
     "max_sheets = 4": "max_sheets = 3",
     "population = 50": "population = 10",
+    'objectives = ["mass", "thickness"]': 'objectives = ["mass", "cost", "thickness"]',
 }
-MARGIN = {**FIRST_LINES, 'objectives = ["mass", "thickness"]': 'objectives = ["mass", "margin"]'}
-BEYOND_REACH = {**FIRST_LINES, '["1 MHz", "70 dB"]': '["1 MHz", "700 dB"]'}
+MARGIN = {**CHANGES, 'objectives = ["mass", "thickness"]': 'objectives = ["mass", "margin"]'}
+BEYOND_REACH = {**CHANGES, '["1 MHz", "75 dB"]': '["1 MHz", "700 dB"]'}
 
 
 def quiet(_: Status) -> None:
@@ -57,7 +58,7 @@ def _no_pictures(monkeypatch: pytest.MonkeyPatch) -> None:
 
 @pytest.fixture
 def problem_file(tmp_path: Path) -> Path:
-    return written(tmp_path, FIRST_LINES)
+    return written(tmp_path, CHANGES)
 
 
 def written(folder: Path, changes: dict[str, str]) -> Path:
@@ -78,13 +79,14 @@ def files_in(folder: Path) -> dict[str, bytes]:
     return {path.relative_to(folder).as_posix(): path.read_bytes() for path in folder.rglob("*") if path.is_file()}
 
 
-class TestFolder:
-    @pytest.fixture(scope="class")
-    def finished(self, tmp_path_factory: pytest.TempPathFactory) -> RunResult:
-        """A run with all its files."""
-        folder = tmp_path_factory.mktemp("run")
-        return run(written(folder, FIRST_LINES), out=folder / "result")
+@pytest.fixture(scope="module")
+def finished(tmp_path_factory: pytest.TempPathFactory) -> RunResult:
+    """A run with all its files."""
+    folder = tmp_path_factory.mktemp("run")
+    return run(written(folder, CHANGES), out=folder / "result")
 
+
+class TestFolder:
     def test_files(self, finished: RunResult) -> None:
         names = set(files_in(finished.folder))
         checkpoints = {name for name in names if name.startswith("checkpoint-")}
@@ -99,6 +101,7 @@ class TestFolder:
             "inputs/problem.toml",
             "inputs/mask.csv",
             "inputs/sets/set.toml",
+            "inputs/sets/ribbon.csv",
         }
 
     def test_copies_of_the_inputs(self, finished: RunResult) -> None:
@@ -123,12 +126,13 @@ class TestFolder:
         assert record["title"] == "Test problem"
         assert record["seed"] == 7
         assert record["machine"]["workers"] == 2
-        assert record["objectives"] == ["mass", "thickness"]
+        assert record["objectives"] == ["mass", "cost", "thickness"]
         assert record["finished"] is record["complete"] is True
         assert record["statement"] == finished.front.statement
         assert record["front"] == len(finished.front) > 1
-        assert record["equal_stacks"] == len(finished.front.equals)
-        assert record["rounds"] == 1 + (record["added_frequencies_hz"] != [[], []])
+        assert record["equal_stacks"] == len(finished.front.equals) > 0
+        assert record["rounds"] > 1
+        assert record["added_frequencies_hz"][0]
         assert [entry["requirement"] for entry in record["quadrature"]] == ["loops", "wave"]
         assert set(record["seconds"]) == {"exploring", "proving", "confirming"}
         assert record["explored"]["epochs"] > 0
@@ -190,13 +194,18 @@ class TestWhere:
 
     def test_inputs_beside_one_another_keep_their_places(self, tmp_path: Path) -> None:
         """The problem may lie deeper than its set."""
-        path = written(tmp_path, {**FIRST_LINES, '"sets/set.toml"': '"../sets/set.toml"', '"mask.csv"': '"mask.csv"'})
+        path = written(tmp_path, {**CHANGES, '"sets/set.toml"': '"../sets/set.toml"'})
         deeper = path.parent / "mine"
         deeper.mkdir()
         for name in ("problem.toml", "mask.csv"):
             (path.parent / name).rename(deeper / name)
         result = run(deeper / "problem.toml", hours=1e-12)
-        assert set(files_in(result.folder / "inputs")) == {"mine/problem.toml", "mine/mask.csv", "sets/set.toml"}
+        assert set(files_in(result.folder / "inputs")) == {
+            "mine/problem.toml",
+            "mine/mask.csv",
+            "sets/set.toml",
+            "sets/ribbon.csv",
+        }
         assert read_record(result.folder)["problem"] == "inputs/mine/problem.toml"
         assert resume(result.folder).front.complete
 
@@ -247,8 +256,9 @@ class TestInterrupted:
     @pytest.mark.parametrize(
         ("phase", "number"), [("exploring", 1), ("exploring", 2), ("proving", 1), ("proving", 3), ("confirming", 1)]
     )
-    def test_goes_on_to_the_same_front(self, problem_file: Path, tmp_path: Path, phase: str, number: int) -> None:
-        straight = run(problem_file, out=tmp_path / "straight")
+    def test_goes_on_to_the_same_front(
+        self, problem_file: Path, tmp_path: Path, phase: str, number: int, finished: RunResult
+    ) -> None:
         with pytest.raises(InterruptedRunError) as caught:
             run(problem_file, interrupt_at(phase, number), out=tmp_path / "stopped")
         assert caught.value.exit_code == 130
@@ -257,19 +267,18 @@ class TestInterrupted:
         assert read_record(tmp_path / "stopped")["finished"] is False
         again = resume(tmp_path / "stopped")
         assert again.folder == tmp_path / "stopped"
-        assert results(again.folder) == results(straight.folder)
-        assert again.front.statement == straight.front.statement
+        assert results(again.folder) == results(finished.folder)
+        assert again.front.statement == finished.front.statement
         assert read_record(again.folder)["complete"] is True
 
-    def test_again_and_again(self, problem_file: Path, tmp_path: Path) -> None:
-        straight = run(problem_file, out=tmp_path / "straight")
+    def test_again_and_again(self, problem_file: Path, tmp_path: Path, finished: RunResult) -> None:
         with pytest.raises(InterruptedRunError):
             run(problem_file, interrupt_at("exploring"), out=tmp_path / "stopped")
         for phase in ("exploring", "proving", "proving"):
             with pytest.raises(InterruptedRunError):
                 resume(tmp_path / "stopped", interrupt_at(phase))
         resume(tmp_path / "stopped")
-        assert results(tmp_path / "stopped") == results(straight.folder)
+        assert results(tmp_path / "stopped") == results(finished.folder)
 
     def test_explored_only(self, tmp_path: Path) -> None:
         """Nothing is proved here, so that the front shows whether the exploring went the same way."""
@@ -303,9 +312,8 @@ class TestInterrupted:
         assert [signal.getsignal(number) for number in (signal.SIGINT, signal.SIGTERM)] == before
 
     def test_damaged_newest_checkpoint(
-        self, problem_file: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+        self, problem_file: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str], finished: RunResult
     ) -> None:
-        straight = run(problem_file, out=tmp_path / "straight")
         with pytest.raises(InterruptedRunError):
             run(problem_file, interrupt_at("proving"), out=tmp_path / "stopped")
         newest = max((tmp_path / "stopped").glob("checkpoint-*.npz"))
@@ -315,7 +323,7 @@ class TestInterrupted:
         printed = capsys.readouterr()
         assert printed.out == ""
         assert f"{newest.name} cannot be used" in printed.err
-        assert results(tmp_path / "stopped") == results(straight.folder)
+        assert results(tmp_path / "stopped") == results(finished.folder)
 
     def test_a_finished_run_again(self, problem_file: Path, tmp_path: Path) -> None:
         result = run(problem_file, out=tmp_path / "run")
@@ -366,7 +374,9 @@ class TestRefused:
     @pytest.mark.parametrize("content", ["", "{", "[]", '"text"', '{"seed": 1}', "\xff"])
     def test_no_record(self, folder: Path, content: str) -> None:
         (folder / "run.json").write_bytes(content.encode("latin-1"))
-        with pytest.raises(RunError, match=r"run\.json: (cannot be read|is not the record of a run).*start a new search"):
+        with pytest.raises(
+            RunError, match=r"run\.json: (cannot be read|is not the record of a run).*start a new search"
+        ):
             resume(folder)
 
     def test_no_checkpoint(self, folder: Path) -> None:
@@ -393,8 +403,7 @@ def change_record(folder: Path, **values: Any) -> None:
 
 @pytest.mark.usefixtures("_no_pictures")
 class TestHours:
-    def test_prove_goes_on_to_the_same_front(self, problem_file: Path, tmp_path: Path) -> None:
-        straight = run(problem_file, out=tmp_path / "straight")
+    def test_prove_goes_on_to_the_same_front(self, problem_file: Path, tmp_path: Path, finished: RunResult) -> None:
         short = run(problem_file, out=tmp_path / "short", hours=1e-12)
         assert not short.front.complete
         assert "Not complete: the proof has settled 0.0 % of the stacks when time ran out" in short.front.statement
@@ -405,22 +414,20 @@ class TestHours:
         assert record["proof"]["share_settled"] == 0.0
         proved = prove_run(short.folder, RunOptions(workers=1), quiet)
         assert proved.front.complete
-        assert results(short.folder) == results(straight.folder)
+        assert results(short.folder) == results(finished.folder)
         assert read_record(short.folder)["proof"]["share_settled"] == 1.0
         assert read_record(short.folder)["explored"]["epochs"] == 0
 
-    def test_prove_may_run_out_of_time_too(self, problem_file: Path, tmp_path: Path) -> None:
-        straight = run(problem_file, out=tmp_path / "straight")
+    def test_prove_may_run_out_of_time_too(self, problem_file: Path, tmp_path: Path, finished: RunResult) -> None:
         short = run(problem_file, out=tmp_path / "short", hours=1e-12)
         assert not prove_run(short.folder, RunOptions(hours=1e-12), quiet).front.complete
         assert prove_run(short.folder, RunOptions(), quiet).front.complete
-        assert results(short.folder) == results(straight.folder)
+        assert results(short.folder) == results(finished.folder)
 
-    def test_search_goes_on_too(self, problem_file: Path, tmp_path: Path) -> None:
-        straight = run(problem_file, out=tmp_path / "straight")
+    def test_search_goes_on_too(self, problem_file: Path, tmp_path: Path, finished: RunResult) -> None:
         short = run(problem_file, out=tmp_path / "short", hours=1e-12)
         assert resume(short.folder).front.complete
-        assert results(short.folder) == results(straight.folder)
+        assert results(short.folder) == results(finished.folder)
 
     def test_exploring_goes_on_where_nothing_is_proved(self, tmp_path: Path) -> None:
         path = written(tmp_path, MARGIN)
@@ -430,9 +437,8 @@ class TestHours:
         resume(short.folder)
         assert results(short.folder) == results(straight.folder)
 
-    def test_part_of_a_proof(self, problem_file: Path, tmp_path: Path) -> None:
+    def test_part_of_a_proof(self, problem_file: Path, tmp_path: Path, finished: RunResult) -> None:
         """A proof stopped half way keeps what it has settled, and prove goes on from there."""
-        straight = run(problem_file, out=tmp_path / "straight")
         with pytest.raises(InterruptedRunError):
             run(problem_file, interrupt_at("proving", 3), out=tmp_path / "short")
         arrays, _, _ = read_checkpoint(tmp_path / "short")
@@ -446,7 +452,7 @@ class TestHours:
 
         prove_run(tmp_path / "short", RunOptions(workers=1), watch)
         assert max(fractions[:2]) >= settled.mean()
-        assert results(tmp_path / "short") == results(straight.folder)
+        assert results(tmp_path / "short") == results(finished.folder)
 
 
 @pytest.mark.usefixtures("_no_pictures")
@@ -472,20 +478,20 @@ class TestSeed:
 class TestInputHash:
     def test_depends_on_content_not_on_place(self, tmp_path: Path) -> None:
         (tmp_path / "elsewhere").mkdir()
-        one = read_problem(written(tmp_path, FIRST_LINES))
-        other = read_problem(written(tmp_path / "elsewhere", FIRST_LINES))
+        one = read_problem(written(tmp_path, CHANGES))
+        other = read_problem(written(tmp_path / "elsewhere", CHANGES))
         assert input_hash(one) == input_hash(other)
 
     @pytest.mark.parametrize("name", ["problem.toml", "sets/set.toml", "mask.csv"])
     def test_depends_on_every_file(self, tmp_path: Path, name: str) -> None:
-        path = written(tmp_path, FIRST_LINES)
+        path = written(tmp_path, CHANGES)
         before = input_hash(read_problem(path))
         changed = path.parent / name
         changed.write_text(changed.read_text() + "\n")
         assert input_hash(read_problem(path)) != before
 
     def test_not_on_files_that_are_not_read(self, tmp_path: Path) -> None:
-        path = written(tmp_path, FIRST_LINES)
+        path = written(tmp_path, CHANGES)
         before = input_hash(read_problem(path))
         (path.parent / "sets" / "notes.txt").write_text("none of it")
         assert input_hash(read_problem(path)) == before

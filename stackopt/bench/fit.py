@@ -12,7 +12,7 @@ from stackopt.bench.intervals import Estimate, bootstrap, estimates, is_vague
 from stackopt.bench.quantities import CONDUCTIVITY, hypotheses
 from stackopt.bench.residuals import MOST_FREQUENCIES, Points, Residuals, nuisances_of, points_of
 from stackopt.bench.showing import Showing, study
-from stackopt.bench.solve import Solution, solve
+from stackopt.bench.solve import FAR_OFF, Solution, improved, solve
 from stackopt.bench.words import count_words
 from stackopt.errors import Finding, InputError
 from stackopt.physics.permeability import PermeabilityLaw
@@ -96,11 +96,12 @@ def fit(setup: Setup, random: np.random.Generator, replicates: int = 200) -> Fit
     trials: list[Solution] = []
     for residuals in _candidates(setup, points):
         trials.append(solve(residuals, random, setup.uncertainty.noise_db, trials[-2:]))
-    chosen = choose(trials)
+    chosen, rivals = improved(choose(trials), random, setup.uncertainty.noise_db is not None)
+    trials = [chosen if trial.residuals is chosen.residuals else trial for trial in trials]
     samples = bootstrap(chosen, replicates, random) if replicates else None
     found = estimates(chosen, samples)
     remarks = (*_reading_remarks(setup), *_fit_remarks(chosen))
-    return Fit(setup, chosen, tuple(trials), found, study(chosen, found), remarks, replicates)
+    return Fit(setup, chosen, tuple(trials), found, study(chosen, found, rivals), remarks, replicates)
 
 
 def usable_points(setup: Setup) -> tuple[Points, ...]:
@@ -179,10 +180,13 @@ def _fit_remarks(solution: Solution) -> list[str]:
             "intervals are too narrow; look at the plot"
         )
     actual = float(np.sqrt(size / solution.freedom))
-    if actual > 2.0 * solution.noise_db:
+    far = int(np.count_nonzero(np.abs(residual) > FAR_OFF * solution.noise_db))
+    if far:
+        remarks.append(f"{count_words(far, 'point')} far off the fit, which gives them little weight; look at the plot")
+    elif actual > 2.0 * solution.noise_db:
         remarks.append(
-            f"the residuals, {actual:.2g} dB rms, are larger than the noise of {solution.noise_db:.2g} dB: some points "
-            "are far off, or the stated noise is too small"
+            f"the residuals, {actual:.2g} dB rms, are larger than the stated noise of "
+            f"{solution.noise_db:.2g} dB; the intervals are too narrow"
         )
     return remarks
 

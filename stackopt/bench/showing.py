@@ -8,6 +8,7 @@ have beside the material's own values, is studied as one more variable.
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -15,7 +16,7 @@ from numpy.typing import NDArray
 
 from stackopt.bench.intervals import Estimate, is_vague
 from stackopt.bench.solve import Solution, half_width
-from stackopt.bench.words import count_words, interval_words, range_words, value_words
+from stackopt.bench.words import interval_words, range_words, value_words
 from stackopt.units import format_thickness
 
 Real = NDArray[np.float64]
@@ -28,6 +29,8 @@ WIDE = 0.5
 """Share of an interval's variance from which its cause is named."""
 LOOSE = 3.0
 """Factor on a deviation from which gaps and a value are said to trade."""
+LOOSEST = 1e-4
+"""Precision that stands for none."""
 NAMES = {
     "conductivity": "conductivity",
     "initial": "permeability",
@@ -63,7 +66,7 @@ class Showing:
     singular_values: tuple[float, ...]
 
 
-def study(solution: Solution, found: tuple[Estimate, ...]) -> Showing:
+def study(solution: Solution, found: tuple[Estimate, ...], rivals: Sequence[Real] = ()) -> Showing:
     """Study a solution.
 
     Parameters
@@ -71,8 +74,11 @@ def study(solution: Solution, found: tuple[Estimate, ...]) -> Showing:
     solution : Solution
     found : tuple of Estimate
         Its fitted values, in the order of the hypothesis.
+    rivals : sequence of ndarray
+        Variables of other minima that fit as well.
     """
-    sentences = [_vague_words(estimate) for estimate in found if not estimate.determined]
+    sentences = [_rival_words(solution, rival) for rival in rivals[:1] if all(item.determined for item in found)]
+    sentences += [_vague_words(estimate) for estimate in found if not estimate.determined]
     jacobian = _with_common_thickness(solution)
     _, singular, directions = np.linalg.svd(jacobian / solution.noise_db, full_matrices=False)
     names = [quantity.name for quantity in solution.residuals.hypothesis.quantities] + ["thickness"]
@@ -129,6 +135,16 @@ def _product_words(solution: Solution, combination: Combination) -> str:
     )
 
 
+def _rival_words(solution: Solution, rival: Real) -> str:
+    """Describe another minimum, which happens where only a product and a mismatch of impedances show."""
+    hypothesis = solution.residuals.hypothesis
+    values = [
+        f"{NAMES[quantity.name]} {value_words(quantity.value(float(x)), quantity.unit)}"
+        for quantity, x in zip(hypothesis.quantities, rival, strict=False)
+    ]
+    return f"Another material fits nearly as well: {', '.join(values)}. State one of its values under [known]."
+
+
 def _vague_words(estimate: Estimate) -> str:
     name = NAMES.get(estimate.name, estimate.name.replace("_", " "))
     return f"These sweeps do not determine the {name}: {range_words(estimate.low, estimate.high, estimate.unit)}."
@@ -157,17 +173,17 @@ def _gap_words(solution: Solution) -> list[str]:
         return []
     at = residuals.free + kinds.index("gaps")
     scaled = solution.jacobian / solution.noise_db
-    prior = np.diag([0.0] * residuals.free + [1.0] * len(kinds))
+    prior = np.diag([LOOSEST] * residuals.free + [1.0] * len(kinds))
     known = scaled.T @ scaled + prior
     loose = known.copy()
-    loose[at, at] -= 1.0
+    loose[at, at] -= 1.0 - LOOSEST
     kept = [index for index in range(len(known)) if index != at]
     sentences = []
     for index, quantity in enumerate(residuals.hypothesis.quantities):
         if is_vague(solution, index) or quantity.name == "high_share":
             continue
-        with_prior, without = (float(np.linalg.pinv(matrix, hermitian=True)[index, index]) for matrix in (known, loose))
-        held = float(np.linalg.pinv(known[np.ix_(kept, kept)], hermitian=True)[index, index])
+        with_prior, without = (float(np.linalg.inv(matrix)[index, index]) for matrix in (known, loose))
+        held = float(np.linalg.inv(known[np.ix_(kept, kept)])[index, index])
         share = 1.0 - held / with_prior
         if share < WIDE:
             continue
@@ -176,9 +192,3 @@ def _gap_words(solution: Solution) -> list[str]:
             sentence += ", and only their stated uncertainty keeps the two apart"
         sentences.append(f"{sentence}: measure the gaps better, or calibrate them with a known sheet.")
     return sentences
-
-
-def sweep_words(solution: Solution) -> str:
-    """Say how well the fit follows the data."""
-    points = len(solution.residual_db)
-    return f"{count_words(points, 'point')}, noise {solution.noise_db:.2g} dB (standard deviation)"

@@ -18,9 +18,16 @@ SCREENED_STARTS = 96
 POLISHED_STARTS = 3
 FIRST_STEPS = 12
 """Steps by which starts are told apart; the best one goes on."""
+RIVAL_STARTS = 8
+RIVAL = 6.0
+"""Rise of the sum of squares up to which another minimum fits nearly as well."""
+DISTINCT = 0.3
+"""Difference of a logarithm from which it is another minimum."""
 FIRST_NOISE_DB = 0.3
 LEAST_NOISE_DB = 0.003
 """The model itself is no better."""
+FAR_OFF = 5.0
+"""Standard deviations from which a point is far off."""
 PRIOR_BOUND = 5.0
 """Standard deviations that a nuisance may move."""
 _GAUSSIAN_LOSS = 0.8744
@@ -179,7 +186,7 @@ def solve(
     return _solution(residuals, variables, scale, jacobian, cost, noise_db is not None)
 
 
-def _starts(residuals: Residuals, random: np.random.Generator) -> list[Real]:
+def _starts(residuals: Residuals, random: np.random.Generator, count: int = POLISHED_STARTS) -> list[Real]:
     """Return the best of many random starts, spread evenly over the logarithms, nuisances at their means."""
     low, high = bounds(residuals)
     free = residuals.free
@@ -187,7 +194,32 @@ def _starts(residuals: Residuals, random: np.random.Generator) -> list[Real]:
     starts[:, :free] = random.uniform(low[:free], high[:free], (SCREENED_STARTS, free))
     measured = residuals.measured_db
     cost = [float(np.mean(np.abs(residuals.predicted_db(start) - measured))) for start in starts]
-    return [starts[index] for index in np.argsort(cost)[:POLISHED_STARTS]]
+    return [starts[index] for index in np.argsort(cost)[:count]]
+
+
+def improved(solution: Solution, random: np.random.Generator, noise_is_given: bool) -> tuple[Solution, list[Real]]:
+    """Look for other minima of a solution's hypothesis.
+
+    Returns
+    -------
+    solution, rivals : Solution, list of ndarray
+        The best of all, and the variables of other minima that fit nearly as well.
+    """
+    residuals, scale = solution.residuals, solution.noise_db
+    best, least = minimise(residuals, solution.variables, scale)
+    found = [(best, least)]
+    for start in _starts(residuals, random, RIVAL_STARTS):
+        found.append(minimise(residuals, start, scale))
+    variables, cost = min(found, key=lambda trial: trial[1])
+    if cost < least - 1e-3:
+        solution = _solution(residuals, variables, scale, residuals.jacobian_db(variables), cost, noise_is_given)
+    rivals: list[Real] = []
+    for other, size in sorted(found, key=lambda trial: trial[1]):
+        known = [variables, *rivals]
+        apart = min(float(np.max(np.abs(other - one)[: residuals.free], initial=0.0)) for one in known)
+        if 2.0 * (size - cost) < RIVAL and apart > DISTINCT:
+            rivals.append(other)
+    return solution, rivals
 
 
 def _extended(residuals: Residuals, simpler: Solution) -> Real:
@@ -201,9 +233,13 @@ def _extended(residuals: Residuals, simpler: Solution) -> Real:
 
 
 def _noise_db(residuals: Residuals, variables: Real, jacobian: Real, scale: float) -> float:
-    """Estimate the noise so that the mean robust loss is that of normal residuals."""
+    """Estimate the noise so that the mean robust loss is that of normal residuals, points far off left out."""
     misfit = residuals.predicted_db(variables) - residuals.measured_db
     freedom = _freedom(residuals, jacobian / scale)
+    typical = float(np.median(np.abs(misfit))) / 0.6745 * np.sqrt(len(misfit) / freedom)
+    near = np.abs(misfit) < FAR_OFF * max(typical, LEAST_NOISE_DB)
+    freedom = max(freedom - np.count_nonzero(~near), 1.0)
+    misfit = misfit[near]
     for _ in range(20):
         root = np.sqrt(1.0 + (misfit / scale / ROBUST) ** 2)
         loss = float(np.sum(2.0 * ROBUST**2 * (root - 1.0))) / freedom / _GAUSSIAN_LOSS

@@ -31,7 +31,7 @@ def _values(material: Material, currency: str) -> Iterator[tuple[str, str]]:
     if material.permeability != NON_MAGNETIC or "permeability" in material.origin:
         yield "permeability", law_words(material.permeability)
     if material.permittivity != 1.0 or "permittivity" in material.origin:
-        yield "permittivity", f"{material.permittivity:.4g}"
+        yield "permittivity", number_words(material.permittivity)
     if material.price_per_kg is not None:
         yield "price_per_kg", f"{material.price_per_kg:g} {currency}/kg"
     if material.price_per_m2:

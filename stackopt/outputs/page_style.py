@@ -46,4 +46,4 @@ def plain(plot: figure) -> None:
         axis.minor_tick_line_color = None
     plot.grid.grid_line_color = "#e4e4e4"
     plot.outline_line_color = "#999999"
-    plot.min_border_right = 12
+    plot.min_border_right = 18

@@ -40,9 +40,9 @@ def radii(radius_m: float, gap_m: float, per_decade: int = 16) -> Real:
     """
     size = max(radius_m, gap_m)
     wide = size * np.logspace(-1.0, 2.0, 3 * per_decade + 1)
-    near = radius_m + gap_m * np.sinh(np.linspace(-1.8, 1.8, per_decade + 1)) if radius_m > 0.0 else wide[:0]
+    near = radius_m + gap_m * np.sinh(np.linspace(-1.8, 1.8, 2 * per_decade + 1)) if radius_m > 0.0 else wide[:0]
     found = np.unique(np.concatenate([[0.0], wide, near[near > 0.0]]))
-    return np.asarray(found[np.append(True, np.diff(found) > 1e-2 * gap_m)])
+    return np.asarray(found[np.append(True, np.diff(found) > 1e-3 * gap_m)])
 
 
 class RadialRule:

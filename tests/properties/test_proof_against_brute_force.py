@@ -25,7 +25,7 @@ from stackopt.compiled import CompiledProblem, compile_problem
 from stackopt.equals import equal_stacks
 from stackopt.explore import Explorer
 from stackopt.problem import CoaxialLoops, Mask, PlaneWave, Problem, Sheet, Stack
-from stackopt.prove import Collector, Prover, Tally, count_stacks, mirror_holds, why_not_provable
+from stackopt.proof import Collector, Prover, Tally, count_stacks, mirror_holds, why_not_provable
 from stackopt.stock import Stock
 
 Integers = NDArray[np.int64]
@@ -117,7 +117,7 @@ class TestAgainstEveryStack:
         check_members(case, prover)
 
     def test_mirror_images(self, case: Case, monkeypatch: pytest.MonkeyPatch) -> None:
-        monkeypatch.setattr("stackopt.prove.mirror_holds", lambda _: False)
+        monkeypatch.setattr("stackopt.proof.mirror_holds", lambda _: False)
         prover = start(case.compiled)
         assert not prover.tables.mirror
         assert prover.run()
@@ -137,7 +137,7 @@ class TestAgainstEveryStack:
     @pytest.mark.parametrize("room", [2, 20_000])
     def test_further_demands(self, case: Case, room: int, monkeypatch: pytest.MonkeyPatch) -> None:
         """A demand that follows no order at all; and a share that has room for few candidates is tried again."""
-        monkeypatch.setattr("stackopt.prove.CANDIDATES", room)
+        monkeypatch.setattr("stackopt.proof.CANDIDATES", room)
         monkeypatch.setattr("stackopt.demands.demands_of", lambda _: (demand,))
         kept = demand(case.compiled, evaluate.encode(case.compiled, list(case.feasible)))
         feasible = {stack: vector for (stack, vector), good in zip(case.feasible.items(), kept, strict=True) if good}
@@ -281,7 +281,7 @@ class TestMirrorImages:
         right = start(compiled)
         assert right.run()
         assert rows_of(right) == expected
-        monkeypatch.setattr("stackopt.prove.mirror_holds", lambda _: True)
+        monkeypatch.setattr("stackopt.proof.mirror_holds", lambda _: True)
         wrong = start(compiled)
         assert wrong.run()
         assert rows_of(wrong) == []

@@ -22,7 +22,7 @@ from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_U
 from stackopt.explore import Explorer
 from stackopt.front import Front, FrontRow
 from stackopt.problem import Problem, Stack
-from stackopt.prove import Collector, Prover, Tally, count_stacks, why_not_provable
+from stackopt.proof import Collector, Prover, Tally, count_stacks, why_not_provable
 from stackopt.scout import scout
 from stackopt.status import Status, Watcher
 from stackopt.stock import Stock
@@ -201,7 +201,8 @@ class Search:
             save()
             rate = (self.explorer.computed - done_before) / max(time.monotonic() - started, 1e-9)
             watcher(self._status("exploring", None, f"{rate:,.0f} stacks/s", None))
-        self.exploring = False
+        if self.obstacle is None:
+            self.exploring = False  # a proof finds whatever is missing by itself
 
     def _prove(self, watcher: Watcher, deadline: float, save: Callable[[], None]) -> None:
         if self.obstacle is not None:

@@ -30,7 +30,7 @@ from stackopt.problem import (
     Stack,
 )
 from stackopt.run import prove, search
-from stackopt.search import DENSITY, Search
+from stackopt.phases import DENSITY, Search
 from stackopt.scout import scout
 from stackopt.status import Status
 from stackopt.units import format_frequency
@@ -163,7 +163,7 @@ class TestRounds:
 
     def test_the_last_round_leaves_out_what_fails(self, monkeypatch: pytest.MonkeyPatch) -> None:
         """No further round is allowed: stacks that fail on the dense grid are not shown, and it is said."""
-        monkeypatch.setattr("stackopt.search.MAX_ROUNDS", 0)
+        monkeypatch.setattr("stackopt.phases.MAX_ROUNDS", 0)
         problem = coarse_problem()
         front = Search(problem).run()
         assert not front.complete

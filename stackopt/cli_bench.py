@@ -166,7 +166,7 @@ def compare(
     is_file = stack.lower().endswith(".toml")
     layers = read_stack(Path(stack), known) if is_file else parse_stack(stack, known.materials)
     result = compare_stack(known, layers, read_sweep(sweep, floor, without), requirement, level)
-    show_comparison(console, result, known.title)
+    show_comparison(console, result, known)
     if csv is not None:
         write_comparison_csv(result, csv)
         console.print(f"Table: {csv}", soft_wrap=True)

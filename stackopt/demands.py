@@ -11,9 +11,10 @@ from collections.abc import Callable
 import numpy as np
 from numpy.typing import NDArray
 
-from stackopt.compiled import CompiledProblem
+from stackopt import rayleigh
+from stackopt.compiled import MARGIN_SLACK_DB, CompiledProblem
 from stackopt.evaluate import decode
-from stackopt.inside import assembly, keeps_limits, worst_inside
+from stackopt.inside import assembly, broken_limits, inside, keeps_limits, worst_inside
 from stackopt.problem import Problem, Stack, format_stack
 from stackopt.tolerance import meets_assumption, samples_for, tolerances_of
 
@@ -74,6 +75,22 @@ def decisive_margins(
     margin_db, row = margin_db.copy(), row.copy()
     margin_db[asked], row[asked] = worst.margin_db, worst.row
     return margin_db, row
+
+
+def holds_at_level(problem: Problem, stack: Stack) -> bool:
+    """Whether a stack meets mask and limits at the permeability that its drives bring about, where that is known.
+
+    An iteration that did not settle does not hold.
+    """
+    for requirement in problem.requirements:
+        if rayleigh.needs_level(problem, stack, requirement):
+            level = rayleigh.at_level(problem, stack, requirement)
+            short = np.any(level.attenuation_db < level.required_db - MARGIN_SLACK_DB)
+            if not level.converged or short:
+                return False
+            if any(broken_limits(inside(problem, stack, requirement, level.extra_mu))):
+                return False
+    return True
 
 
 def extra_columns(compiled: CompiledProblem, codes: Integers) -> list[dict[str, float | str]]:

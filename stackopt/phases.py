@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 from stackopt import demands, evaluate
 from stackopt.archive import Archive
 from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_UNIT, compile_problem
+from stackopt.explain import explain
 from stackopt.explore import Explorer
 from stackopt.front import Front, FrontRow
 from stackopt.problem import Problem, Stack
@@ -26,7 +27,6 @@ from stackopt.proof import Collector, Prover, Tally, count_stacks, why_not_prova
 from stackopt.scout import scout
 from stackopt.status import Status, Watcher
 from stackopt.stock import Stock
-from stackopt.units import format_frequency
 
 Integers = NDArray[np.int64]
 
@@ -313,15 +313,20 @@ class Search:
     def _front(self, confirmed: _Confirmed, some_failed: bool) -> Front:
         """Front of the confirmed stacks; of equal ones the row shows the one with the largest margin."""
         ranked, equals = [], []
+        lost_at_level = 0
         for number in range(len(self.archive)):
             here = np.flatnonzero((confirmed.rows == number) & (confirmed.decisive_db >= -MARGIN_SLACK_DB))
-            if len(here) == 0:
+            holding = [n for n in here.tolist() if demands.holds_at_level(self.problem, confirmed.stacks[n])]
+            lost_at_level += len(here) > 0 and not holding
+            if not holding:
                 continue
-            best, *others = sorted(here.tolist(), key=lambda n: -round(float(confirmed.decisive_db[n]), 6))
+            best, *others = sorted(holding, key=lambda n: -round(float(confirmed.decisive_db[n]), 6))
             ranked.append(self._row(confirmed, best))
             equals += [(len(ranked), self._row(confirmed, n)) for n in others]
-        complete = self.prover is not None and self.prover.complete and not some_failed
+        complete = self.prover is not None and self.prover.complete and not some_failed and not lost_at_level
         statement = self._statement(len(ranked), complete, some_failed)
+        if lost_at_level:
+            statement += f" {lost_at_level} left out: they fail where the drive changes their permeability."
         return Front(self.problem, tuple(ranked), complete, statement, tuple(equals))
 
     def _row(self, confirmed: _Confirmed, n: int) -> FrontRow:
@@ -360,11 +365,7 @@ class Search:
     def _nearest(self) -> str:
         if not self.compiled.sheets:
             return ""
-        found = scout(self.compiled)
-        if not found.stack:
-            return "The rules allow no stack."
-        where = f"requirement {found.requirement!r} at {format_frequency(found.frequency_hz)}"
-        return f"The best stack of a quick look has a margin of {found.margin_db:.1f} dB, in {where}."
+        return explain(self.compiled, scout(self.compiled))
 
 
 def _objective_text(name: str, value: int, currency: str) -> str:

@@ -24,9 +24,9 @@ from stackopt.front import Front
 from stackopt.outputs.files import write_whole
 from stackopt.outputs.plots import write_curves, write_trade_off
 from stackopt.outputs.tables import write_alternatives, write_equals, write_front
+from stackopt.phases import Search
 from stackopt.problem import Problem
 from stackopt.readers import read_problem
-from stackopt.phases import Search
 from stackopt.status import Status, Watcher
 
 CHECKPOINT_EVERY_S = 30.0

@@ -50,6 +50,8 @@ _BLOCK = 512
 _SAMPLES_AT_A_TIME = 32
 _KEPT_BYTES = 3e8
 """Memory for the tables of samples."""
+_KNOWN = 10_000
+"""Stacks whose margins at every sample are remembered."""
 _NORMAL_95 = 1.959963984540054
 """95 % of a normal distribution lie within so many deviations."""
 _KEY = "tolerances"
@@ -154,7 +156,7 @@ class Tolerances:
         ``samples`` is rounded up to a power of two; the same samples serve all stacks (`stackopt.deviation.sampled`).
         """
         drawn = self._drawn(samples, seed)
-        passed = drawn.count(codes, None)
+        passed = np.count_nonzero(drawn.margins(codes)[0] >= -MARGIN_SLACK_DB, axis=1)
         return Yields(passed / drawn.samples, *wilson_interval(passed, drawn.samples), drawn.samples)
 
     def meets_yield(self, codes: Integers, goal: float, seed: int, samples: int | None = None) -> Booleans:
@@ -320,9 +322,10 @@ class _Samples:
         blocks = int(compiled.rows.row_block[-1]) * (1 if compiled.problem.rules.bond is None else 2)
         self._room = int(_KEPT_BYTES / (8.0 * SHEET * blocks * len(compiled.sheets) * self.step))
         self._kept: dict[int, Cases] = {}
+        self._known: dict[bytes, tuple[Real, Integers]] = {}
 
-    def count(self, codes: Integers, needed: int | None) -> Integers:
-        """Count the samples at which each stack meets the mask; when ``needed`` is known, only until it is decided."""
+    def count(self, codes: Integers, needed: int) -> Integers:
+        """Count the samples at which each stack meets the mask, until it is decided whether it does at ``needed``."""
         passed = np.zeros(len(codes), dtype=np.int64)
         if not self.deviations:
             passed[evaluate.margins(self.compiled, codes)[0] >= -MARGIN_SLACK_DB] = self.samples
@@ -333,19 +336,27 @@ class _Samples:
                 break
             margin, _ = self._part(start, codes[undecided])
             passed[undecided] += np.count_nonzero(margin >= -MARGIN_SLACK_DB, axis=1)
-            if needed is not None:
-                left = self.samples - start - margin.shape[1]
-                undecided = undecided[(passed[undecided] < needed) & (passed[undecided] + left >= needed)]
+            left = self.samples - start - margin.shape[1]
+            undecided = undecided[(passed[undecided] < needed) & (passed[undecided] + left >= needed)]
         return passed
 
     def margins(self, codes: Integers) -> tuple[Real, Integers]:
         """Smallest margins at every sample, dB, and their rows, both of shape (stack, sample)."""
-        if not self.deviations:
-            margin, row = evaluate.margins(self.compiled, codes)
-            return margin[:, None].repeat(self.samples, axis=1), row[:, None].repeat(self.samples, axis=1)
-        parts = [self._part(start, codes) for start in range(0, self.samples, self.step)]
-        margin, row = (np.concatenate(columns, axis=1) for columns in zip(*parts, strict=True))
-        return margin, row
+        keys = [code.tobytes() for code in codes]
+        fresh = [n for n, key in enumerate(keys) if key not in self._known]
+        if len(self._known) + len(fresh) > _KNOWN:
+            self._known, fresh = {}, list(range(len(keys)))
+        if fresh and self.deviations:
+            parts = [self._part(start, codes[fresh]) for start in range(0, self.samples, self.step)]
+            margin, row = (np.concatenate(columns, axis=1) for columns in zip(*parts, strict=True))
+        elif fresh:
+            margin, row = (x[:, None].repeat(self.samples, 1) for x in evaluate.margins(self.compiled, codes[fresh]))
+        self._known.update({keys[n]: (margin[number], row[number]) for number, n in enumerate(fresh)})
+        shape = (len(keys), self.samples)
+        margins, rows = np.empty(shape), np.empty(shape, dtype=np.int64)
+        for n, key in enumerate(keys):
+            margins[n], rows[n] = self._known[key]
+        return margins, rows
 
     def _part(self, start: int, codes: Integers) -> tuple[Real, Integers]:
         """Do as `margins` does, at the samples of one set of tables."""

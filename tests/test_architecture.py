@@ -26,13 +26,14 @@ ROWS = (
     ("drive_point", "inside", "rayleigh"),
     ("readers", "readers.*"),
     ("lanes", "kernel", "descent"),
+    ("rows",),
     ("compiled",),
     ("evaluate",),
     ("cases", "tolerance", "band", "sensitivity"),
     ("demands",),
     ("stock", "scout", "equals", "prediction", "choice", "explain", "build"),
-    ("explore", "prove"),
-    ("search",),
+    ("explore", "proof"),
+    ("phases",),
     ("bench", "bench.*"),
     ("outputs", "outputs.*"),
     ("run", "runs"),
@@ -120,7 +121,7 @@ class TestImports:
         assert set(order) >= set(NAMES)
 
     def test_the_two_searches_do_not_know_each_other(self) -> None:
-        for one, other in (("explore", "prove"), ("prove", "explore")):
+        for one, other in (("explore", "proof"), ("proof", "explore")):
             assert other not in reachable(one)
 
     def test_the_kernel_knows_no_problem(self) -> None:

@@ -296,6 +296,7 @@ def test_search_shows_front_statement_files_and_cautions(problem: Path, finished
         "out": problem.parent / "new",
         "resume": None,
         "allow_outside": False,
+        "within": None,
     }
     for part in ("rank", "aluminium 200um", "Complete: invented.", "front.csv, trade_off.png", "not a measurement"):
         assert part in result.stdout
@@ -309,7 +310,7 @@ def test_resume_and_prove_take_a_run(finished: FakeRun) -> None:
     assert finished.options["resume"] == finished.folder
     assert run("prove", finished.folder, "--hours", "2").exit_code == 0
     assert finished.asked == finished.folder
-    assert finished.options == {"hours": 2.0, "workers": None}
+    assert finished.options == {"hours": 2.0, "workers": None, "within": None}
 
 
 def test_an_empty_front_is_a_no(problem: Path, finished: FakeRun) -> None:

@@ -16,11 +16,11 @@ from stackopt.compiled import (
     CompiledProblem,
     compile_problem,
     sheet_sums,
-    thickest_stack_m,
 )
 from stackopt.physics import fields, line
 from stackopt.physics.media import air
 from stackopt.problem import ElectricNearField, MagneticNearField, Mask, Material, PlaneWave, Sheet
+from stackopt.rows import thickest_stack_m
 
 FAR = Mask((1e3, 1e6), (10.0, 40.0), margin_db=3.0, points_per_decade=2)
 NEAR = Mask((0.0, 50.0, 5e3), (0.0, 5.0, 20.0), points_per_decade=1)

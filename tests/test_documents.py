@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import ast
 import json
 import re
 import shutil
@@ -165,30 +164,6 @@ def test_every_module_has_its_line_for_developers() -> None:
     modules = {path.relative_to(ROOT / "stackopt").as_posix() for path in (ROOT / "stackopt").rglob("*.py")}
     unnamed = {name for name in modules if Path(name).name != "__init__.py" or name == "__init__.py"} - spans
     assert not unnamed
-
-
-def imported_modules(path: Path) -> set[str]:
-    """Modules of the package that a module imports, anywhere in it, as they stand in the table for developers."""
-    found = set()
-    for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
-        if isinstance(node, ast.ImportFrom) and (node.module or "").split(".")[0] == "stackopt":
-            inside = "/".join((node.module or "").split(".")[1:])
-            found |= {f"{inside}/{alias.name}.py".lstrip("/") for alias in node.names} | {f"{inside}.py"}
-    return {name for name in found if (ROOT / "stackopt" / name).is_file()}
-
-
-def test_modules_import_from_rows_above_their_own_only() -> None:
-    table = text_of("DEVELOPERS.md").split("## Map of the code")[1].split("\n## ")[0]
-    rows = re.findall(r"^\| (`[^|]*\.py`) \|", table, re.MULTILINE)
-    place = {name: number for number, row in enumerate(rows) for name in re.findall(r"`([^`]+)`", row)}
-    wrong = [
-        f"{name} imports {other}"
-        for name in place
-        if name != "__init__.py" and (ROOT / "stackopt" / name).is_file()
-        for other in imported_modules(ROOT / "stackopt" / name)
-        if place.get(other, -1) > place[name]
-    ]
-    assert not wrong
 
 
 def test_every_dependency_has_its_reason() -> None:

@@ -50,7 +50,7 @@ def test_help(tmp_path: Path, arguments: list[str]) -> None:
     code, loaded, printed = loaded_by(tmp_path, *arguments)
     assert code == 0
     assert printed
-    assert not loaded & (HEAVY | {"numpy", "rich", "pydantic"})
+    assert not loaded & (HEAVY | {"numpy", "rich"})
 
 
 def test_wrong_option(tmp_path: Path) -> None:

@@ -369,6 +369,14 @@ class TestYield:
             covered.append(found.low[0] <= share <= found.high[0])
         assert np.mean(covered) >= 0.95
 
+    def test_no_stacks_have_no_yield(self) -> None:
+        compiled, codes = half_feasible()
+        judge = Tolerances(compiled)
+        assert judge.yield_of(codes[:0], 64, 1).fraction.shape == (0,)
+        assert judge.meets_yield(codes[:0], 0.9, 1).shape == (0,)
+        assert judge.meets_worst(codes[:0]).shape == (0,)
+        assert judge.goal_margins(codes[:0], 0.9, 1).margin_db.shape == (0,)
+
     def test_samples_resolve_the_goal(self) -> None:
         assert [samples_for(goal) for goal in (0.5, 0.95, 0.99, 0.999)] == [256, 256, 1024, 4096]
 

@@ -178,7 +178,7 @@ def comparison_figure(comparison: Comparison, title: str) -> Figure:
     for number, cause in enumerate(comparison.causes[:SHOWN_CAUSES], start=2):
         look = {"color": style.COLOURS[number], "linestyle": style.LINES[number - 1], "linewidth": 1.3}
         top.plot(comparison.cause_hz, style.measurable(cause.attenuation_db), **look, zorder=2.6)
-        handles.append(Line2D([], [], **look, label=style.wrapped(f"with {cause.words}", 100)))
+        handles.append(Line2D([], [], **look, label=style.wrapped(f"consistent with {cause.words}", 100)))
     style.attenuation_axis(top, *_span([comparison.low_db, comparison.high_db, sweep.attenuation_db]))
     _draw_difference(bottom, comparison)
     for axes in (top, bottom):

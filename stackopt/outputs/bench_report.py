@@ -16,9 +16,10 @@ from stackopt.bench.compare import MEETS, MISSES, OUTSIDE, UNTOLD, Comparison
 from stackopt.bench.fit import Fit, law_rows
 from stackopt.bench.intervals import Estimate
 from stackopt.bench.words import count_words, range_words, value_words
+from stackopt.outputs.cautions import HEAT, METAL_S_PER_M
 from stackopt.outputs.files import write_whole
 from stackopt.outputs.report import section_text, show_text
-from stackopt.problem import format_stack
+from stackopt.problem import Problem, format_stack
 from stackopt.units import format_attenuation, format_frequency
 
 SHOWN_CAUSES = 5
@@ -52,6 +53,7 @@ def show_fit(console: Console, fit: Fit, name: str) -> None:
         console.print("\nWhat the sweeps show", style="bold")
         console.print(section_text([("-", text) for text in fit.showing.sentences], console.width), soft_wrap=True)
     _show_remarks(console, fit.remarks)
+    _show_heat(console, fit.conductivity_s_per_m)
 
 
 def _law_reason(fit: Fit) -> str:
@@ -92,6 +94,13 @@ def _show_remarks(console: Console, remarks: Sequence[str]) -> None:
         console.print(section_text([("-", remark) for remark in remarks], console.width), soft_wrap=True)
 
 
+def _show_heat(console: Console, conductivity_s_per_m: float) -> None:
+    """Print the caution that bears on the bench."""
+    if conductivity_s_per_m > METAL_S_PER_M:
+        console.print()
+        show_text(console, f"Caution: {HEAT}")
+
+
 def show_calibration(console: Console, calibration: Calibration) -> None:
     """Print the calibrated lengths."""
     console.print(f"Calibration of {calibration.setup.name}", style="bold", soft_wrap=True)
@@ -111,11 +120,12 @@ def show_calibration(console: Console, calibration: Calibration) -> None:
     console.print()
     show_text(console, text)
     _show_remarks(console, calibration.remarks)
+    _show_heat(console, calibration.setup.conductivity_s_per_m or 0.0)
 
 
-def show_comparison(console: Console, comparison: Comparison, problem_title: str) -> None:
+def show_comparison(console: Console, comparison: Comparison, problem: Problem) -> None:
     """Print whether a prototype meets its mask, and how it compares with its prediction."""
-    console.print(f"{problem_title}: {comparison.requirement.name}", style="bold", soft_wrap=True)
+    console.print(f"{problem.title}: {comparison.requirement.name}", style="bold", soft_wrap=True)
     noise = "given" if comparison.noise_is_given else "estimated from the scatter of neighbouring points"
     lines = [
         ("stack", format_stack(comparison.stack)),
@@ -132,6 +142,7 @@ def show_comparison(console: Console, comparison: Comparison, problem_title: str
         console.print("\nLikely causes, each by itself", style="bold")
         console.print(section_text(_cause_lines(comparison), console.width), soft_wrap=True)
     _show_remarks(console, comparison.remarks)
+    _show_heat(console, max(problem.materials[sheet.material].conductivity_s_per_m for sheet in comparison.stack))
 
 
 def _mask_words(comparison: Comparison) -> str:

@@ -22,6 +22,7 @@ from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_U
 from stackopt.explain import explain
 from stackopt.explore import Explorer
 from stackopt.front import Front, FrontRow
+from stackopt.model import with_bonds
 from stackopt.problem import Problem, Stack
 from stackopt.proof import Collector, Prover, Tally, count_stacks, why_not_provable
 from stackopt.scout import scout
@@ -311,7 +312,7 @@ class Search:
         return failures
 
     def _front(self, confirmed: _Confirmed, some_failed: bool) -> Front:
-        """Front of the confirmed stacks; of equal ones the row shows the one with the largest margin."""
+        """Front of the confirmed stacks; of equal ones a row shows that of largest margin, then fewest sheets."""
         ranked, equals = [], []
         lost_at_level = 0
         for number in range(len(self.archive)):
@@ -320,7 +321,9 @@ class Search:
             lost_at_level += len(here) > 0 and not holding
             if not holding:
                 continue
-            best, *others = sorted(holding, key=lambda n: -round(float(confirmed.decisive_db[n]), 6))
+            best, *others = sorted(
+                holding, key=lambda n: (-round(float(confirmed.decisive_db[n]), 6), len(confirmed.stacks[n]))
+            )
             ranked.append(self._row(confirmed, best))
             equals += [(len(ranked), self._row(confirmed, n)) for n in others]
         complete = self.prover is not None and self.prover.complete and not some_failed and not lost_at_level
@@ -332,12 +335,15 @@ class Search:
     def _row(self, confirmed: _Confirmed, n: int) -> FrontRow:
         stack = confirmed.stacks[n]
         mass, cost, thickness = confirmed.totals[n]
-        priced = all(self.problem.materials[s.material].price(s.thickness_m) is not None for s in stack)
+        priced = all(
+            self.problem.materials[layer.material].price(layer.thickness_m) is not None
+            for layer in with_bonds(self.problem, stack)
+        )
         return FrontRow(
             stack=stack,
-            mass_kg_per_m2=mass / MASS_UNIT,
-            cost_per_m2=cost / COST_UNIT if priced else float("nan"),
-            thickness_m=thickness / THICKNESS_UNIT,
+            mass_kg_per_m2=float(mass / MASS_UNIT),
+            cost_per_m2=float(cost / COST_UNIT) if priced else float("nan"),
+            thickness_m=float(thickness / THICKNESS_UNIT),
             margin_db=float(confirmed.margin_db[n]),
             tightest_hz=float(confirmed.frequency_hz[n]),
             requirement=self.problem.requirements[confirmed.requirement[n]].name,
@@ -357,7 +363,7 @@ class Search:
             settled = f"Explored, not proved: {self.obstacle}."
         else:
             covered = 0.0 if self.prover is None else self.prover.covered
-            settled = f"Not complete: the proof has settled {100.0 * covered:.1f} % of the stacks when time ran out."
+            settled = f"Not complete: the proof has settled {100.0 * covered:.1f} % of the stacks so far."
         if some_failed:
             settled += " Stacks that failed on the dense grid were left out."
         return settled if size else f"No stack found that meets the mask. {settled} {self._nearest()}"

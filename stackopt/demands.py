@@ -61,20 +61,22 @@ def heat_w(compiled: CompiledProblem, codes: Integers) -> Real:
 
 
 def decisive_margins(
-    compiled: CompiledProblem, codes: Integers, margin_db: Real, row: Integers
+    compiled: CompiledProblem, codes: Integers, margin_db: Real, row: Integers, known: Booleans
 ) -> tuple[Real, Integers]:
-    """Return the margins that decide, dB, and their rows: the nominal ones given, or those of the worst corners.
+    """Return the margins that decide, dB, and their rows.
 
-    A stack that misses its yield has the margin of its worst corner.
+    They are the nominal ones given, those of the worst corners, or those that the goal's share of samples reaches.
+    ``known`` marks the rows that a yield need not name, shape (row,).
     """
-    assume = compiled.problem.search.assume
-    if assume == "nominal" or len(codes) == 0:
+    search = compiled.problem.search
+    if search.assume == "nominal" or len(codes) == 0:
         return margin_db, row
-    asked = np.ones(len(codes), dtype=bool) if assume == "worst" else ~meets_assumption(compiled, codes)
-    worst = tolerances_of(compiled).worst_margins(codes[asked])
-    margin_db, row = margin_db.copy(), row.copy()
-    margin_db[asked], row[asked] = worst.margin_db, worst.row
-    return margin_db, row
+    judge = tolerances_of(compiled)
+    if search.assume == "worst":
+        found = judge.worst_margins(codes)
+    else:
+        found = judge.goal_margins(codes, search.yield_goal, search.random_seed, known=known)
+    return found.margin_db, found.row
 
 
 def holds_at_level(problem: Problem, stack: Stack) -> bool:

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from stackopt import demands, evaluate
 from stackopt.archive import Archive
-from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_UNIT, compile_problem
+from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_UNIT, CompiledProblem, compile_problem
 from stackopt.explain import explain
 from stackopt.explore import Explorer
 from stackopt.front import Front, FrontRow
@@ -287,10 +287,20 @@ class Search:
         codes = evaluate.encode(dense, stacks)
         totals = evaluate.sums(dense, codes)
         margin, row = evaluate.margins(dense, codes, totals)
-        decisive, row = demands.decisive_margins(dense, codes, margin, row)
+        decisive, row = demands.decisive_margins(dense, codes, margin, row, self._on_search_grid(dense))
         extra = demands.extra_columns(dense, codes)
         where, which = dense.rows.frequency_hz[row], dense.rows.requirement[row]
         return _Confirmed(none, stacks, totals, margin, decisive, extra, where, which)
+
+    def _on_search_grid(self, dense: CompiledProblem) -> NDArray[np.bool_]:
+        """Which rows of the dense grid are rows of the search grid too."""
+        known = np.zeros(len(dense.rows.frequency_hz), dtype=bool)
+        for number in range(len(self.problem.requirements)):
+            grid = self.compiled.rows.frequency_hz[self.compiled.rows.requirement == number]
+            here = dense.rows.requirement == number
+            near = np.isclose(dense.rows.frequency_hz[here][:, None], grid, rtol=1e-9, atol=0.0)
+            known[here] = np.any(near, axis=1)
+        return known
 
     def _candidates(self) -> tuple[Integers, list[Stack]]:
         if self.obstacle is not None:

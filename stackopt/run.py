@@ -242,6 +242,8 @@ class _Run:
             "versions": {"python": platform.python_version()} | {name: version(name) for name in packages},
             "machine": {"processor": platform.machine(), "cores": os.cpu_count(), "workers": task.workers},
             "objectives": list(self.problem.search.objectives),
+            "assume": self.problem.search.assume,
+            "driven": [requirement.name for requirement in self.problem.requirements if requirement.drive],
             "finished": front is not None,
             "complete": front is not None and front.complete,
         }

@@ -26,6 +26,8 @@ DISTINCT = 0.3
 FIRST_NOISE_DB = 0.3
 LEAST_NOISE_DB = 0.003
 """The model itself is no better."""
+SAME_NOISE = 0.003
+"""Relative change of the noise at which its estimate has settled."""
 FAR_OFF = 5.0
 """Standard deviations from which a point is far off."""
 PRIOR_BOUND = 5.0
@@ -180,7 +182,9 @@ def solve(
     variables, cost = minimise(residuals, min(trials, key=lambda trial: trial[1])[0], scale)
     jacobian = residuals.jacobian_db(variables)
     for _ in range(3 if noise_db is None else 0):
-        scale = _noise_db(residuals, variables, jacobian, scale)
+        before, scale = scale, _noise_db(residuals, variables, jacobian, scale)
+        if abs(scale / before - 1.0) < SAME_NOISE:
+            break
         variables, cost = minimise(residuals, variables, scale)
         jacobian = residuals.jacobian_db(variables)
     return _solution(residuals, variables, scale, jacobian, cost, noise_db is not None)

@@ -180,10 +180,10 @@ class Prover:
         return beyond or bool(self.archive.covers(_values(self.compiled, codes))[0])
 
     def _descend(self, number: int, stop: NDArray[np.uint8]) -> _Outcome:
-        cover = self._cover()
+        cover, room = self._cover(), self.room  # the room may grow meanwhile
         counters = np.zeros(2, dtype=np.int64)
-        found, finished = self.tables.descend(self.shares[number], stop, cover, counters, self.keep_all, self.room)
-        return _Outcome(found, finished, len(found) == self.room, counters)
+        found, finished = self.tables.descend(self.shares[number], stop, cover, counters, self.keep_all, room)
+        return _Outcome(found, finished, len(found) == room, counters)
 
     def _cover(self) -> descent.Cover:
         """Copy of the archive's cover, made anew only when the archive has changed."""

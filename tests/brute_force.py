@@ -1,4 +1,4 @@
-"""Every stack of a small problem by the readable equations: what the fast code is held to. Nothing here is fast or clever.
+"""Every stack of a small problem by the readable equations: what the fast code is held to, neither fast nor clever.
 
 Rules and sums are written again from the problem's own words, without the tables of `stackopt.compiled`; only the
 spectral lines are shared, so that fields and fronts can agree exactly.
@@ -69,7 +69,7 @@ def is_allowed(problem: Problem, stack: Stack) -> bool:
 
 
 def _touching(problem: Problem, stack: Stack) -> Iterator[tuple[str, str]]:
-    """Pairs of materials that lie on one another; a bond that insulates keeps the sheets apart, not the fixed layers."""
+    """Pairs of materials that lie on one another; an insulating bond keeps the sheets apart, not the fixed layers."""
     rules = problem.rules
     names = [sheet.material for sheet in stack]
     if rules.bond is None or problem.materials[rules.bond.material].conductivity_s_per_m >= 1.0:

@@ -27,7 +27,7 @@ ROWS = (
     ("readers", "readers.*"),
     ("lanes", "kernel", "descent"),
     ("rows",),
-    ("compiled",),
+    ("rows", "compiled"),
     ("evaluate",),
     ("cases", "tolerance", "band", "sensitivity"),
     ("demands",),

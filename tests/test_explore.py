@@ -65,7 +65,7 @@ def explored(stock: Stock, epochs: int = 2, seed: int = 3, population: int = 16,
 
 
 def check_archive(explorer: Explorer, tolerance_db: float) -> None:
-    """Every member keeps the rules, reaches its objectives, meets the mask by the slow oracle; none dominates another."""
+    """Members keep the rules, reach their objectives, meet the mask by the slow oracle; none dominates another."""
     problem = explorer.stock.compiled.problem
     stacks = explorer.stock.stacks(explorer.archive.codes)
     vectors = [tuple(vector) for vector in explorer.archive.values.tolist()]
@@ -101,7 +101,7 @@ class TestFinds:
             (make("thin plate", "copper", max_sheets=2, objectives=("margin", "thickness")), 1e-6),
         ],
         ids=[
-            "gauges", "both", "ranges", "plane wave", "loops", "faces", "limits", "sheets", "margin", "margin of ranges",
+            "gauges", "both", "ranges", "plane wave", "loops", "faces", "limits", "sheets", "margin", "free margin",
         ],
     )  # fmt: skip
     def test_feasible_stacks(self, stock: Stock, tolerance_db: float) -> None:

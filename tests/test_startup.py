@@ -1,4 +1,4 @@
-"""Commands that only look must not load the heavy packages: each in a fresh interpreter. Times are printed, not judged."""
+"""Commands that only look do not load heavy packages. Each in a fresh interpreter; times are printed, not judged."""
 
 from __future__ import annotations
 

@@ -28,9 +28,7 @@ MASK = Mask((1e3, 1e5), (14.0, 60.0), points_per_decade=1)
 
 def make_stock(*use: str, max_sheets: int = 3, **more: object) -> Stock:
     return Stock(
-        compile_problem(
-            build_problem(FIELD, masks=[MASK], materials=MIXED, use=use, max_sheets=max_sheets, **more)
-        )
+        compile_problem(build_problem(FIELD, masks=[MASK], materials=MIXED, use=use, max_sheets=max_sheets, **more))
     )
 
 

@@ -182,9 +182,10 @@ def solve(
     variables, cost = minimise(residuals, min(trials, key=lambda trial: trial[1])[0], scale)
     jacobian = residuals.jacobian_db(variables)
     for _ in range(3 if noise_db is None else 0):
-        before, scale = scale, _noise_db(residuals, variables, jacobian, scale)
-        if abs(scale / before - 1.0) < SAME_NOISE:
+        estimate = _noise_db(residuals, variables, jacobian, scale)
+        if abs(estimate / scale - 1.0) < SAME_NOISE:
             break
+        scale = estimate
         variables, cost = minimise(residuals, variables, scale)
         jacobian = residuals.jacobian_db(variables)
     return _solution(residuals, variables, scale, jacobian, cost, noise_db is not None)
@@ -313,7 +314,8 @@ def _aicc(residuals: Residuals, cost: float, scale: float, noise_is_given: bool)
     penalty = 2.0 * values * points / (points - values - 1.0)
     if noise_is_given:
         return 2.0 * cost + penalty
-    return float(points * np.log(2.0 * cost * scale**2 / points) + penalty)
+    square = max(2.0 * cost * scale**2 / points, LEAST_NOISE_DB**2)
+    return float(points * np.log(square) + penalty)
 
 
 def half_width(freedom: float) -> float:

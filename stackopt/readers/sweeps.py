@@ -25,6 +25,7 @@ FREQUENCY = "frequency_hz"
 FORMS = (("without_v", "with_v"), ("without_db", "with_db"), ("attenuation_db",))
 """Columns that a sweep may have beside its frequency."""
 _FORMS_TEXT = "; ".join(",".join((FREQUENCY, *form)) for form in FORMS)
+LARGEST_DB, LARGEST_HZ = 1e3, 1e12
 MAX_FINDINGS = 10
 MAX_NAMED = 6
 """Frequencies or lines that a remark names one by one."""
@@ -95,7 +96,8 @@ def read_sweep(
     if known.suffix.lower() == ".s2p" or without is not None:
         from stackopt.readers.touchstone import read_pair
 
-        levels, remarks = read_pair(known, None if without is None else Path(without))
+        frequency, without_db, with_db, remarks = read_pair(known, None if without is None else Path(without))
+        levels = Levels(frequency, without_db - with_db, without_db, FORMS[1])
     else:
         levels, remarks = _read_csv(known)
     return _ordered(known, levels, remarks, floor)
@@ -171,6 +173,10 @@ def _numbers(
 def _checked(value: float, name: str) -> float:
     if name.endswith("_v") and value < 0.0:
         raise ValueError(f"found {value:g} V; write the amplitude, 0 V or more")
+    if name.endswith("_db") and abs(value) > LARGEST_DB:
+        raise ValueError(f"found {value:g} dB; no instrument reads beyond {LARGEST_DB:g} dB")
+    if name == FREQUENCY and value > LARGEST_HZ:
+        raise ValueError(f"found {value:g} Hz; sweeps up to {LARGEST_HZ:g} Hz are read")
     return value
 
 

@@ -7,21 +7,24 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from stackopt.errors import Finding, InputError
 from stackopt.readers.files import read_text
-from stackopt.readers.sweeps import FORMS, Levels
+
+Real = NDArray[np.float64]
 
 SAME_FREQUENCY = 1e-6
 """Relative difference up to which two analysers' frequencies are one."""
 
 
-def read_pair(path: Path, without: Path | None) -> tuple[Levels, list[str]]:
+def read_pair(path: Path, without: Path | None) -> tuple[Real, Real, Real, list[str]]:
     """Read S21 with the sheet from one Touchstone file and without it from another.
 
     Returns
     -------
-    levels, remarks : Levels, list of str
+    frequency_hz, without_db, with_db : ndarray, shape (frequency,)
+    remarks : list of str
 
     Raises
     ------
@@ -45,9 +48,11 @@ def read_pair(path: Path, without: Path | None) -> tuple[Levels, list[str]]:
         if not np.all(np.isfinite(values)) or np.any(values <= 0.0):
             raise InputError(Finding(str(file), "", "has an S21 of 0 or none at all; measure again"))
     keep = f > 0.0
+    if not np.any(keep):
+        raise InputError(Finding(str(path), "", "has no frequency above 0 Hz; measure again"))
     remarks = [] if np.all(keep) else ["frequencies not above 0 Hz, left out"]
-    levels = [20.0 * np.log10(values[keep]) for values in size]
-    return Levels(np.asarray(f[keep], dtype=float), levels[0] - levels[1], levels[0], FORMS[1]), remarks
+    without_db, with_db = (np.asarray(20.0 * np.log10(values[keep]), dtype=float) for values in size)
+    return np.asarray(f[keep], dtype=float), without_db, with_db, remarks
 
 
 def _read(path: Path) -> Any:

@@ -71,6 +71,15 @@ def test_compare_on_the_demonstration(tmp_path: Path) -> None:
     assert as_text.output.splitlines()[:8] == result.output.splitlines()[:8]
 
 
+def test_a_sheet_that_does_nothing(tmp_path: Path) -> None:
+    setup = bench_files.write_setup(tmp_path)
+    rows = "".join(f"{number}e3,0\n" for number in range(1, 9))
+    (tmp_path / "copper.csv").write_text("frequency_hz,attenuation_db\n" + rows)
+    result = run("fit", setup, "--material", "foil")
+    assert result.exit_code == 0
+    assert "do not determine the conductivity: anything up to" in text_of(result)
+
+
 def test_a_floor_is_respected(tmp_path: Path) -> None:
     setup = bench_files.write_setup(tmp_path)
     result = run("fit", setup, "--material", "foil", "--floor", "30 dB", "--bootstrap", "0")

@@ -98,6 +98,8 @@ def test_levels_near_the_floor_are_marked(tmp_path: Path, text: str, floor: str)
         ("frequency_hz,without_v,with_v\n1000,1,-0.1\n", ["line 2, column 3 (with_v)", "-0.1 V"]),
         ("frequency_hz;attenuation_db\n1.000,5;20\n", ["mixes commas and points", "1.000,5"]),
         ("frequency_hz;attenuation_db\n1,000;20\n2,000;30\n", ["divide thousands", "1,000"]),
+        ("frequency_hz,without_db,with_db\n1,1e308,-1e308\n", ["line 2, column 2", "line 2, column 3", "1e+308 dB"]),
+        ("frequency_hz,attenuation_db\n1e300,2\n", ["line 2, column 1", "1e+300 Hz"]),
         ("frequency_hz,attenuation_db\n-5,20\n", ["no line with a frequency above 0 Hz"]),
         (b"frequency_hz,attenuation_db\n1000,\xff\n", ["not UTF-8", "line 2"]),
     ],

@@ -52,6 +52,6 @@ def told(benchmark: BenchmarkFixture, prover: Prover) -> None:
     benchmark.extra_info |= {"front": len(prover.archive), "opened": tally.opened, "judged": tally.judged}
     rate = tally.judged / tally.seconds
     print(  # noqa: T201 - for -s
-        f"\n{benchmark.name}: front of {len(prover.archive)}, {tally.opened:,} prefixes opened, {tally.judged:,} stacks "
-        f"judged, {rate:,.0f} a second"
+        f"\n{benchmark.name}: front of {len(prover.archive)}, {tally.opened:,} prefixes opened, "
+        f"{tally.judged:,} stacks judged, {rate:,.0f} a second"
     )

@@ -10,6 +10,7 @@ from collections import Counter
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from functools import cache
+from typing import Any
 
 import brute_force
 import numpy as np
@@ -346,6 +347,22 @@ class TestInterrupted:
         second.done[:] = first.done
         assert second.run(2)
         assert rows_of(second) == deep.front
+
+    def test_room_that_grows_meanwhile(self, deep: Case, monkeypatch: pytest.MonkeyPatch) -> None:
+        """Another share may make room while one runs out of it; it is tried again all the same."""
+        monkeypatch.setattr("stackopt.proof.CANDIDATES", 1)
+        monkeypatch.setattr("stackopt.demands.demands_of", lambda _: (demand,))
+        prover = start(deep.compiled)
+        descend = prover.tables.descend
+
+        def crowded(*arguments: Any) -> tuple[Integers, bool]:
+            outcome = descend(*arguments)
+            prover.room *= 2
+            return outcome
+
+        monkeypatch.setattr(prover.tables, "descend", crowded)
+        assert prover.run()
+        assert prover.complete
 
     def test_the_tally_grows(self, deep: Case) -> None:
         tally = Tally(opened=5, judged=7, seconds=1.0)

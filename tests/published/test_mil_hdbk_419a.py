@@ -119,7 +119,7 @@ def metal_values(metal: str, f: float) -> tuple[float, float]:
 
 @pytest.mark.parametrize(("f", "metal", "wave", "printed"), ENTRIES)
 def test_reflection_equations_give_table_8_4(f: float, metal: str, wave: str, printed: float) -> None:
-    """The transcription of the equations above is the one that the table was made with."""
+    """The equations as written down above are the ones that the table was made with."""
     mu, g = metal_values(metal, f)
     loss = {
         "H": magnetic_reflection_db(f, R_TABLE, mu, g),

@@ -308,6 +308,9 @@ def descend(prefix, recurse, stop, rules, physics, cover, keep_all, room, row_or
     total = np.empty(TOTAL)
     found = np.empty((64, max_sheets), np.int64)
     count = 0
+    opened = 0  # counted here and not in the array, whose cache line other threads may share
+    asked = 0
+    finished = True
 
     state[: start.size] = start
     scales[0] = fixed_scale
@@ -319,13 +322,14 @@ def descend(prefix, recurse, stop, rules, physics, cover, keep_all, room, row_or
     usable_count[base] = sheets
     while depth >= 0:
         if stop[0] != 0:
-            return found[:count], False
+            finished = False
+            break
         judged = _choose_children(
             sums, limits, used, may_first, may_last, may_touch, mirror, least, shift,
             path, totals, usable, usable_count, alive, fate, depth,
         )  # fmt: skip
-        counters[0] += 1
-        counters[1] += judged
+        opened += 1
+        asked += judged
         for position in range(rows):
             if judged == 0:
                 break
@@ -348,17 +352,22 @@ def descend(prefix, recurse, stop, rules, physics, cover, keep_all, room, row_or
                 c = totals[depth, 2] + sums[min(depth, 1), s, 2]
                 _add_to_cover(least, shift, used, a, b, c, depth + 1)
             if count == room:
-                return found[:count], False
+                finished = False
+                break
             if count == found.shape[0]:
                 found = _longer(found, count)
             for d in range(max_sheets):
                 found[count, d] = path[d] + 1 if d < depth else 0
             found[count, depth] = s + 1
             count += 1
+        if not finished:
+            break
         branch_count[depth] = 0
         if recurse and depth + 1 < max_sheets:
             _list_branches(usable, usable_count, branch, branch_count, fate, depth)
         depth = _next_node(
             sums, used, least, shift, path, totals, valid, usable, usable_count, branch, branch_count, depth, base
         )
-    return found[:count], True
+    counters[0] += opened
+    counters[1] += asked
+    return found[:count], finished

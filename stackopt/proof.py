@@ -62,7 +62,7 @@ def count_stacks(sheets: int, max_sheets: int) -> int:
     Examples
     --------
     >>> count_stacks(45, 6)
-    8491781250
+    8492487570
     """
     return sum(sheets**n for n in range(1, max_sheets + 1))
 

@@ -37,13 +37,44 @@ COARSE_RULE = HankelRule(12, -1.6, 3.2)
 """Quadrature of the coaxial fields: the same lines serve both sides of a comparison, so that any rule will do."""
 
 
-def small_problem(seed: int, sheets: int | None = None, depth: int | None = None) -> tuple[Problem, CompiledProblem]:
+def small_problem(
+    seed: int, sheets: int | None = None, depth: int | None = None, **rules: Any
+) -> tuple[Problem, CompiledProblem]:
     """A random problem of 3 to 8 sheets, up to 3 in a stack (4 where there are few), with its tables.
 
     The masks are set so that some stacks pass and some fail; a few problems ask for more than any stack gives.
+    ``rules`` replace the random ones.
     """
     random = np.random.default_rng((seed, 1))
-    return _with_masks(random, draft_problem(seed, sheets, depth))
+    problem = draft_problem(seed, sheets, depth)
+    return _with_masks(random, replace(problem, rules=replace(problem.rules, **rules)))
+
+
+def close_problem(seed: int) -> tuple[Problem, CompiledProblem]:
+    """Eight sheets of one metal within two per cent of one another, mostly the thinner the dearer: long fronts."""
+    random = np.random.default_rng((seed, 2))
+    gauges = np.sort(random.choice(np.arange(1000, 1021), 8, replace=False)) * 1e-7
+    prices = np.sort(random.choice(np.arange(2000, 2041), 8, replace=False))[::-1] / 100.0
+    prices[1::3] += 0.3
+    metal = Material(
+        "metal",
+        float(random.choice([3e6, 2e7])),
+        float(random.integers(2000, 9000)),
+        Constant(float(random.choice([1.0, 30.0]))),
+        gauges_m=tuple(gauges.tolist()),
+        price_per_m2=tuple(zip(gauges.tolist(), prices.tolist(), strict=True)),
+    )
+    objectives = [("mass", "cost"), ("cost", "thickness", "sheets"), ("cost", "mass", "thickness")][seed % 3]
+    problem = Problem(
+        title="Invented",
+        currency="EUR",
+        materials={"metal": metal},
+        use=("metal",),
+        requirements=(Requirement("field", MagneticNearField(0.05), Mask((1e4, 1e5), (0.0, 0.0), 0.0, 1)),),
+        rules=StackRules(3),
+        search=SearchSettings(objectives, random_seed=seed, population=12),
+    )
+    return _with_masks(random, problem)
 
 
 def draft_problem(seed: int, sheets: int | None = None, depth: int | None = None) -> Problem:

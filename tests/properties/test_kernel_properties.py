@@ -93,9 +93,7 @@ def test_sums_do_not_depend_on_the_order(problem: Problem, seed: int, data: st.D
     (row,) = random_codes(compiled, seed, 1)
     used = row[row > 0]
     shuffled = np.array(data.draw(st.permutations(used.tolist())))
-    np.testing.assert_array_equal(
-        evaluate.sums(compiled, shuffled[None, :]), evaluate.sums(compiled, used[None, :])
-    )
+    np.testing.assert_array_equal(evaluate.sums(compiled, shuffled[None, :]), evaluate.sums(compiled, used[None, :]))
 
 
 @given(

@@ -135,9 +135,7 @@ def test_coaxial_dipoles_gain_no_more_than_a_shorter_way(
     """
     frequency = np.array([f])
     lines = fields.coaxial_lines(frequency, 0.0, 0.0, gaps, fields.REFERENCE_RULE)
-    stack = [
-        (medium(frequency, mu * complex(math.cos(phi), -math.sin(phi)), sigma), d) for mu, phi, sigma, d in parts
-    ]
+    stack = [(medium(frequency, mu * complex(math.cos(phi), -math.sin(phi)), sigma), d) for mu, phi, sigma, d in parts]
     thickness = sum(d for *_, d in parts)
     shorter = sum(d * math.cos(phi) for _, phi, _, d in parts)
     bound = 60.0 * math.log10((gaps + shorter) / (gaps + thickness))

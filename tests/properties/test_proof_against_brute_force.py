@@ -32,8 +32,11 @@ from stackopt.stock import Stock
 Integers = NDArray[np.int64]
 
 SMALL = range(220)
-DEEP = range(1000, 1010)
-"""Eight sheets, up to four in a stack: 4680 stacks, longer fronts."""
+DEEP = range(1000, 1012)
+"""Eight sheets, up to four in a stack: 4680 stacks, longer fronts; every other one with metals that may not touch."""
+CLOSE = range(2000, 2012)
+"""Eight sheets that hardly differ: long fronts of vectors close to one another."""
+APART = {"bond": None, "max_anodic_gap_v": 0.2, "first": None, "last": None}
 
 
 @dataclass(frozen=True)
@@ -47,7 +50,12 @@ class Case:
 
 
 def make_case(seed: int) -> Case:
-    problem, compiled = small_problems.small_problem(seed, *((8, 4) if seed in DEEP else ()))
+    if seed in CLOSE:
+        problem, compiled = small_problems.close_problem(seed)
+    elif seed in DEEP:
+        problem, compiled = small_problems.small_problem(seed, 8, 4, **(APART if seed % 2 else {}))
+    else:
+        problem, compiled = small_problems.small_problem(seed)
     feasible = brute_force.feasible_stacks(problem, compiled.rows.spectra)
     return Case(problem, compiled, feasible, brute_force.front_of(list(feasible.values())))
 
@@ -55,7 +63,7 @@ def make_case(seed: int) -> Case:
 deep_case = cache(make_case)
 
 
-@pytest.fixture(scope="module", params=[*SMALL, *DEEP])
+@pytest.fixture(scope="module", params=[*SMALL, *DEEP, *CLOSE])
 def case(request: pytest.FixtureRequest) -> Case:
     return deep_case(request.param) if request.param in DEEP else make_case(request.param)
 
@@ -108,6 +116,21 @@ class TestAgainstEveryStack:
         assert prover.covered == 1.0
         assert rows_of(prover) == case.front
         check_members(case, prover)
+
+    def test_limits_that_are_met_exactly(self, case: Case) -> None:
+        """Limits at the sums of the last front member: what reaches them is not lost, what is beyond them is."""
+        members = [stack for stack, vector in case.feasible.items() if case.front and vector == case.front[-1]]
+        limits = brute_force.totals(case.problem, members[0]) if members else (0, 0, 0)
+        within = {
+            stack: vector
+            for stack, vector in case.feasible.items()
+            if all(a <= b for a, b in zip(brute_force.totals(case.problem, stack), limits, strict=True))
+        }
+        rules = replace(case.compiled.rules, limits=np.array(limits, dtype=np.int64))
+        prover = start(replace(case.compiled, rules=rules))
+        assert prover.run()
+        assert rows_of(prover) == brute_force.front_of(list(within.values()))
+        assert not members or case.front[-1] in rows_of(prover)
 
     def test_known_stacks_change_nothing(self, case: Case) -> None:
         random = np.random.default_rng(len(case.feasible))
@@ -202,6 +225,18 @@ def test_the_problems_are_varied() -> None:
         assert 3 <= len(problem.sheets) <= 8
     assert len(seen) == 4 + 3 + 4 + 4 + 5 + 1 + 10
     assert min(seen.values()) >= 8, seen
+
+
+def test_equal_stacks_of_sheets_that_cost_nothing() -> None:
+    """Sums that do not grow with a sheet: all feasible stacks are equal, long ones with short ones inside."""
+    materials = {name: replace(MATERIALS[name], price_per_kg=None) for name in ("copper", "laminate")}
+    problem = build_problem(masks=[Mask((1e4,), (20.0,))], materials=materials, max_sheets=3, objectives=("cost",))
+    compiled = compile_problem(problem)
+    feasible = brute_force.feasible_stacks(problem, compiled.rows.spectra)
+    assert set(feasible.values()) == {(0,)}
+    rows, codes = equal_stacks(compiled, np.array([[0]]))
+    assert not rows.any()
+    assert sorted(map(str, evaluate.decode(compiled, codes))) == sorted(map(str, feasible))
 
 
 class TestMirrorImages:
@@ -357,7 +392,7 @@ class TestInterrupted:
 
         def crowded(*arguments: Any) -> tuple[Integers, bool]:
             outcome = descend(*arguments)
-            prover.room *= 2
+            prover.room = min(2 * prover.room, 10_000)
             return outcome
 
         monkeypatch.setattr(prover.tables, "descend", crowded)

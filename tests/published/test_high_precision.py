@@ -216,9 +216,7 @@ def layers_of(stack: tuple[Sheet, ...]) -> list[Layer]:
 def test_automatically_chosen_rules(field: CoaxialDipoles | CoaxialLoops) -> None:
     """Stacks that no rule was judged by: 0.05 dB wherever the attenuation is below 200 dB."""
     mask = Mask((10.0, 1e3, 1e5, 3e6), (0.0,) * 4, points_per_decade=1)
-    problem = build_problem(
-        field, masks=[mask], max_sheets=4, materials=PLAIN, use=[*PLAIN][:-1], bond=film(25)
-    )
+    problem = build_problem(field, masks=[mask], max_sheets=4, materials=PLAIN, use=[*PLAIN][:-1], bond=film(25))
     compiled = compile_problem(problem)
     assert compiled.rows.quadrature[0].lines <= 80
     assert compiled.rows.quadrature[0].error_db <= 0.01

@@ -91,9 +91,7 @@ def test_transmission_lines_of_the_library(layers: list[Layer]) -> None:
     frequency = skrf.Frequency.from_f(HZ, unit="hz")
     for layer in layers:
         u, impedance = propagation(layer, lines.k[:, 0], "TE")
-        own = skrf.media.DefinedGammaZ0(frequency, gamma=u, z0=impedance).line(
-            layer[3], unit="m", s_def="traveling"
-        )
+        own = skrf.media.DefinedGammaZ0(frequency, gamma=u, z0=impedance).line(layer[3], unit="m", s_def="traveling")
         ((medium, thickness),) = media_of([layer], HZ)
         chain = line.medium_chain(medium, thickness, lines.k, HZ, "TE")
         through = np.exp(-u * layer[3])  # between ports of its own impedance a line only delays and weakens

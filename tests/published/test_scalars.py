@@ -23,9 +23,7 @@ def coupling(source_radius: float, victim_radius: float, distance: float, freque
     The weights stand for h^3 times the integral of (2 J1(ka)/a) (2 J1(kb)/b) (k/u0) e^{-u0 h} over k, whose value is 2
     for dipoles at rest.
     """
-    lines = fields.coaxial_lines(
-        np.array([frequency]), source_radius, victim_radius, distance, fields.REFERENCE_RULE
-    )
+    lines = fields.coaxial_lines(np.array([frequency]), source_radius, victim_radius, distance, fields.REFERENCE_RULE)
     value, log_scale = fields.transmitted(lines, [])
     return complex(value[0] * np.exp(-log_scale[0])) / 2.0
 

@@ -186,7 +186,7 @@ def test_output_fits_the_terminal(problem: Path, columns: int) -> None:
         ("materials", problem.parent / "sets/set.toml"),
     ):
         lines = run(*arguments, columns=columns).output.splitlines()
-        assert max(len(line) for line in lines if str(problem.parent) not in line) <= columns
+        assert max(len(line) for line in lines if problem.parent.name not in line) <= columns
 
 
 def test_predict_reports_the_mistakes_of_all_stacks(problem: Path) -> None:

@@ -51,11 +51,12 @@ def small_problem(
 
 
 def close_problem(seed: int) -> tuple[Problem, CompiledProblem]:
-    """Eight sheets of one metal within two per cent of one another, mostly the thinner the dearer: long fronts."""
+    """Eight sheets of one metal with prices close to one another, mostly the thinner the dearer: long fronts."""
     random = np.random.default_rng((seed, 2))
-    gauges = np.sort(random.choice(np.arange(1000, 1021), 8, replace=False)) * 1e-7
-    prices = np.sort(random.choice(np.arange(2000, 2041), 8, replace=False))[::-1] / 100.0
-    prices[1::3] += 0.3
+    spread = 1 + 9 * (seed % 2)  # of the gauges, from two to twenty per cent
+    gauges = (1000 + spread * np.sort(random.choice(21, 8, replace=False))) * 1e-7
+    prices = (20000 - np.sort(random.choice(41, 8, replace=False))) / 1000.0
+    prices[1::3] += 0.3 * (1 - seed % 2)
     metal = Material(
         "metal",
         float(random.choice([3e6, 2e7])),
@@ -64,7 +65,7 @@ def close_problem(seed: int) -> tuple[Problem, CompiledProblem]:
         gauges_m=tuple(gauges.tolist()),
         price_per_m2=tuple(zip(gauges.tolist(), prices.tolist(), strict=True)),
     )
-    objectives = [("mass", "cost"), ("cost", "thickness", "sheets"), ("cost", "mass", "thickness")][seed % 3]
+    objectives = [("mass", "cost"), ("cost", "thickness", "sheets"), ("cost", "mass", "thickness")][seed // 2 % 3]
     problem = Problem(
         title="Invented",
         currency="EUR",

@@ -24,6 +24,10 @@ class Status:
         Best value so far of each objective, as text with its unit.
     seconds_left : float or None
         Estimated time to the end of the phase.
+    margins : mapping
+        Largest margin so far for each requirement, dB: of the front, or of the nearest stack while it is empty.
+    share_proved : float or None
+        Share of all stacks that the proof has settled, 0 to 1, or None where none has begun.
     """
 
     phase: str
@@ -32,6 +36,8 @@ class Status:
     front_size: int = 0
     best: Mapping[str, str] = field(default_factory=dict)
     seconds_left: float | None = None
+    margins: Mapping[str, float] = field(default_factory=dict)
+    share_proved: float | None = None
 
 
 Watcher = Callable[[Status], None]

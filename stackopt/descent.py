@@ -1,4 +1,4 @@
-"""Compiled depth-first descent over all stacks below a prefix: the inner loop of the proof. Arrays in, arrays out.
+"""Compiled depth-first descent over all stacks below some prefixes: the inner loop of the proof. Arrays in, arrays out.
 
 A *node* is a prefix; opening it looks at every stack that is one sheet longer (its children). Three cuts, all exact:
 
@@ -19,6 +19,10 @@ Rows are tried in the order that rejected most so far, and a prefix's row vector
 by row, only when a row is first asked for. The last sheet is never multiplied on: z = p alpha + q beta, with
 alpha = (A + B e)/w and beta = (C + D e)/w tabulated with the sheets of a row side by side, so that judging all children
 in one row reads a few kilobytes in order.
+
+A descent ends when it has done a given amount of work and hands back the prefixes that it did not open; with those it
+can be continued, in parts, by others. *Work* is counted in blocks multiplied or closed, so that it does not depend on
+the clock.
 """
 
 from __future__ import annotations
@@ -37,6 +41,7 @@ CELLS = 192
 """Steps of a cover along each of its first two objectives."""
 UNCOVERED = np.iinfo(np.int64).max
 
+_NODE_WORK, _CHILD_WORK, _MULTIPLIED_WORK = 20, 1, 4  # in units of a closed block: roughly equal times
 _OPEN, _OUT, _NOT_HERE = 0, 1, 2  # fates of a child: to be gone into, settled, against a rule in this place only
 
 
@@ -162,7 +167,7 @@ def _choose_children(  # type: ignore[no-untyped-def]
 
 @njit(cache=True, nogil=True)
 def _bring_up(table, bonded, scale, row_block, path, state, scales, valid, depth, row):  # type: ignore[no-untyped-def]
-    """Compute the row vectors of a row up to the prefix of the given depth."""
+    """Compute the row vectors of a row up to the prefix of the given depth; return for how many prefixes it was new."""
     blocks = row_block[-1]
     have = depth
     while valid[have, row] == 0:
@@ -174,6 +179,7 @@ def _bring_up(table, bonded, scale, row_block, path, state, scales, valid, depth
             multiply_block(table, (sheet * blocks + block) * SHEET, state, old, state, new)
         scales[d + 1, row] = scales[d, row] + scale[min(d, 1), path[d], row]
         valid[d + 1, row] = 1
+    return depth - have
 
 
 @njit(cache=True, nogil=True)
@@ -259,33 +265,53 @@ def _longer(found, count):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True, nogil=True)
-def descend(prefix, recurse, stop, rules, physics, cover, keep_all, room, row_order, counters):  # type: ignore[no-untyped-def]
-    """Open a prefix and, if asked to, everything below it.
+def _unopened(prefixes, number, path, branch, branch_count, base, depth):  # type: ignore[no-untyped-def]
+    """Return the prefixes that were not opened: those before ``number``, branches, and the node at ``depth``."""
+    count = number + (1 if depth >= 0 else 0)
+    for d in range(base, depth):
+        count += branch_count[d]
+    left = np.zeros((count, prefixes.shape[1]), np.int64)
+    at = number
+    left[:at] = prefixes[:at]
+    for d in range(base, depth):
+        for n in range(branch_count[d]):
+            for e in range(d):
+                left[at, e] = path[e] + 1
+            left[at, d] = branch[d, n] + 1
+            at += 1
+    if depth >= 0:
+        for e in range(depth):
+            left[at, e] = path[e] + 1
+    return left
+
+
+@njit(cache=True, nogil=True)
+def descend(prefixes, rules, physics, cover, keep_all, room, work, row_order, counters):  # type: ignore[no-untyped-def]
+    """Open prefixes and everything below them, until some work is done.
 
     Parameters
     ----------
-    prefix : int64 (depth,)
-        Sheet numbers from 0; the prefix itself is settled.
-    recurse : bool
-        Whether to go on below the children.
-    stop : uint8 (1,)
-        Set by another thread to make this one return at once, unfinished.
+    prefixes : int64 (prefixes, max_sheets)
+        Codes (sheet number + 1), packed from the source side; the prefixes themselves are settled. The last is first.
     rules, physics, cover
         The cover grows as stacks are found, unless ``keep_all``.
     keep_all : bool
         Collect every feasible stack that is not covered, and go on below it too.
     room : int
-        Largest number of stacks to collect; one more ends the descent, unfinished.
+        The descent also ends when it has found this many stacks, or up to the number of sheets more.
+    work : int
+        What to do at most, in blocks multiplied or closed; one prefix is opened in any case.
     row_order : int64 (R,)
         Order in which rows are tried; rows that reject move forward in it.
-    counters : int64 (2,)
-        Prefixes opened and children judged; added to.
+    counters : int64 (3,)
+        Prefixes opened, children judged, and work; added to.
 
     Returns
     -------
     found : int64 (stacks, max_sheets)
-        Codes (sheet number + 1) of the feasible stacks met.
-    finished : bool
+        Codes of the feasible stacks met.
+    left : int64 (prefixes, max_sheets)
+        Prefixes that were not opened, to be gone on with in the same way.
     """
     sums, limits, used, thickness_axis, may_first, may_last, may_touch, max_sheets, mirror = rules
     table, closing, bonded, scale, row_block, start, fixed_scale = physics[:7]
@@ -310,64 +336,70 @@ def descend(prefix, recurse, stop, rules, physics, cover, keep_all, room, row_or
     count = 0
     opened = 0  # counted here and not in the array, whose cache line other threads may share
     asked = 0
-    finished = True
+    done = 0
 
     state[: start.size] = start
     scales[0] = fixed_scale
     valid[0] = 1
-    depth = base = prefix.size
-    for d in range(base):
-        _add_sheet(sums, path, totals, valid, d, prefix[d])
-    usable[base] = np.arange(sheets)
-    usable_count[base] = sheets
-    while depth >= 0:
-        if stop[0] != 0:
-            finished = False
-            break
-        judged = _choose_children(
-            sums, limits, used, may_first, may_last, may_touch, mirror, least, shift,
-            path, totals, usable, usable_count, alive, fate, depth,
-        )  # fmt: skip
-        opened += 1
-        asked += judged
-        for position in range(rows):
-            if judged == 0:
-                break
-            row = row_order[position]
-            _bring_up(table, bonded, scale, row_block, path, state, scales, valid, depth, row)
-            surviving = _judge_row(
-                sums, thickness_axis, closing, bonded, scale, row_block, coefficients, highest, reach, thickest,
-                required, totals, state, scales, alive, total, depth, row, judged,
+    base = depth = -1
+    number = prefixes.shape[0]
+    while number > 0 and depth < 0:
+        number -= 1
+        base = 0
+        while base < max_sheets and prefixes[number, base] > 0:
+            _add_sheet(sums, path, totals, valid, base, prefixes[number, base] - 1)
+            base += 1
+        depth = base
+        if base > 0 and _is_covered(least, shift, used, totals[base, 0], totals[base, 1], totals[base, 2], base):
+            depth = -1
+            continue  # by a stack found since
+        usable[base] = np.arange(sheets)
+        usable_count[base] = sheets
+        while depth >= 0 and (opened == 0 or (done < work and count < room)):
+            done += _NODE_WORK + _CHILD_WORK * usable_count[depth]
+            judged = _choose_children(
+                sums, limits, used, may_first, may_last, may_touch, mirror, least, shift,
+                path, totals, usable, usable_count, alive, fate, depth,
             )  # fmt: skip
-            if surviving < judged and position > 0:
-                row_order[position] = row_order[position - 1]
-                row_order[position - 1] = row
-            judged = surviving
-        for n in range(judged):  # the feasible ones
-            s = alive[n]
-            if not keep_all:
-                fate[s] = _OUT
-                a = totals[depth, 0] + sums[min(depth, 1), s, 0]
-                b = totals[depth, 1] + sums[min(depth, 1), s, 1]
-                c = totals[depth, 2] + sums[min(depth, 1), s, 2]
-                _add_to_cover(least, shift, used, a, b, c, depth + 1)
-            if count == room:
-                finished = False
-                break
-            if count == found.shape[0]:
-                found = _longer(found, count)
-            for d in range(max_sheets):
-                found[count, d] = path[d] + 1 if d < depth else 0
-            found[count, depth] = s + 1
-            count += 1
-        if not finished:
-            break
-        branch_count[depth] = 0
-        if recurse and depth + 1 < max_sheets:
-            _list_branches(usable, usable_count, branch, branch_count, fate, depth)
-        depth = _next_node(
-            sums, used, least, shift, path, totals, valid, usable, usable_count, branch, branch_count, depth, base
-        )
+            opened += 1
+            asked += judged
+            for position in range(rows):
+                if judged == 0:
+                    break
+                row = row_order[position]
+                width = row_block[row + 1] - row_block[row]
+                new = _bring_up(table, bonded, scale, row_block, path, state, scales, valid, depth, row)
+                surviving = _judge_row(
+                    sums, thickness_axis, closing, bonded, scale, row_block, coefficients, highest, reach, thickest,
+                    required, totals, state, scales, alive, total, depth, row, judged,
+                )  # fmt: skip
+                done += width * (judged + _MULTIPLIED_WORK * new)
+                if surviving < judged and position > 0:
+                    row_order[position] = row_order[position - 1]
+                    row_order[position - 1] = row
+                judged = surviving
+            for n in range(judged):  # the feasible ones
+                s = alive[n]
+                if not keep_all:
+                    fate[s] = _OUT
+                    a = totals[depth, 0] + sums[min(depth, 1), s, 0]
+                    b = totals[depth, 1] + sums[min(depth, 1), s, 1]
+                    c = totals[depth, 2] + sums[min(depth, 1), s, 2]
+                    _add_to_cover(least, shift, used, a, b, c, depth + 1)
+                if count == found.shape[0]:
+                    found = _longer(found, count)
+                for d in range(max_sheets):
+                    found[count, d] = path[d] + 1 if d < depth else 0
+                found[count, depth] = s + 1
+                count += 1
+            branch_count[depth] = 0
+            if depth + 1 < max_sheets:
+                _list_branches(usable, usable_count, branch, branch_count, fate, depth)
+            depth = _next_node(
+                sums, used, least, shift, path, totals, valid, usable, usable_count, branch, branch_count, depth, base
+            )
+    left = _unopened(prefixes, number, path, branch, branch_count, base, depth)
     counters[0] += opened
     counters[1] += asked
-    return found[:count], finished
+    counters[2] += done
+    return found[:count], left

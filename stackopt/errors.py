@@ -5,6 +5,7 @@
     StackoptError                 exit code
      |- InputError                2   a file, an option or a stack text is wrong
      |   `- RunError              2   a run folder cannot be used
+     |- WorkersLostError          2   worker processes or a cluster cannot be used; a run's checkpoint stands
      |- UnmetMaskError            1   the answer is no: no stack meets the mask
      |- NothingLeftError          1   the answer is no: the filters leave no stack of a front
      `- InterruptedRunError       130 stopped by the user, a checkpoint is written
@@ -52,6 +53,10 @@ class InputError(StackoptError):
 
 class RunError(InputError):
     """A run folder that cannot be read, written or resumed."""
+
+
+class WorkersLostError(StackoptError):
+    """Workers that are killed again and again, or cannot be reached."""
 
 
 class UnmetMaskError(StackoptError):

@@ -142,6 +142,11 @@ def objective_values(
     return np.stack([columns[name] for name in compiled.problem.search.objectives], axis=1)
 
 
+def monotone_values(compiled: CompiledProblem, codes: Integers) -> Integers:
+    """Integer objectives of stacks where none of them needs the attenuation, shape (stack, objective)."""
+    return objective_values(compiled, codes, sums(compiled, codes))
+
+
 def excess(compiled: CompiledProblem, codes: Integers, totals: Integers) -> Real:
     """How far each stack goes beyond the limits: the sum of relative excesses, plus one for an empty stack."""
     limits = compiled.rules.limits.astype(float)

@@ -3,13 +3,15 @@
 The search of every island is pymoo's NSGA-II inside ask and tell, on integer genes (`stackopt.stock`). After each epoch
 the archives of the islands are merged, the new members are polished by all their local moves until nothing improves,
 and the islands start again from their populations and some members of the archive. An epoch depends on nothing but the
-seed, its number, the populations and the archive, so that the state between epochs is a few plain arrays.
+seed, its number, the populations and the archive, so that the state between epochs is a few plain arrays, and that it
+does not matter how many workers share the islands and the moves.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -22,8 +24,10 @@ from pymoo.core.problem import Problem as PymooProblem
 from pymoo.core.termination import NoTermination
 
 from stackopt.archive import Archive
+from stackopt.moves import mutate, neighbours, pair_neighbours, random_genes
 from stackopt.scout import scout
 from stackopt.stock import Judged, Stock
+from stackopt.workers import Serial, Workers, gather
 
 Integers = NDArray[np.int64]
 
@@ -32,10 +36,8 @@ GENERATIONS = 12
 """Generations of an epoch."""
 QUIET_EPOCHS = 2
 """Exploring ends after so many epochs without a new member."""
-
-
-MOST_PAIRS = 40_000
-"""Moves of two positions tried from a stack."""
+_TOGETHER = 2
+"""Stacks whose moves are one call."""
 
 
 class StackProblem(PymooProblem):  # type: ignore[misc]
@@ -98,61 +100,6 @@ class StackMutation(Mutation):  # type: ignore[misc]
         return mutate(self.stock, np.asarray(x, dtype=np.int64), random_state)
 
 
-def mutate(stock: Stock, genes: Integers, random: np.random.Generator) -> Integers:
-    """Change each stack once, at random."""
-    result = genes.copy()
-    m = stock.positions
-    for row, change in zip(
-        result, random.choice(6, size=len(result), p=[0.2, 0.3, 0.15, 0.12, 0.13, 0.1]), strict=True
-    ):
-        codes = row[:m]
-        used = int(np.count_nonzero(codes))
-        at = int(random.integers(used)) if used else 0
-        if used == 0 or change == 0:
-            _put(stock, row, at, int(random.integers(1, stock.choices + 1)), random)
-        elif change == 1:
-            _step_gauge(stock, row, at, random)
-        elif change == 2:
-            _step_material(stock, row, at, random)
-        elif change == 3 and used < m:
-            place = int(random.integers(used + 1))
-            row[place + 1 : m] = row[place : m - 1].copy()
-            row[m + place + 1 :] = row[m + place : -1].copy()
-            _put(stock, row, place, int(random.integers(1, stock.choices + 1)), random)
-        elif change == 4 and used > 1:
-            codes[at] = 0
-        else:
-            other = int(random.integers(used))
-            for half in (codes, row[m:]):
-                half[at], half[other] = half[other], half[at]
-    return stock.tidy(result)
-
-
-def _put(stock: Stock, row: Integers, at: int, code: int, random: np.random.Generator) -> None:
-    row[at] = code
-    low, high = stock.ranges_pm[code]
-    row[stock.positions + at] = round(float(low * (high / low) ** random.random())) if low else 0
-
-
-def _step_gauge(stock: Stock, row: Integers, at: int, random: np.random.Generator) -> None:
-    code = int(row[at])
-    if stock.ranges_pm[code, 0]:
-        row[stock.positions + at] = round(float(row[stock.positions + at] * np.exp(0.2 * random.standard_normal())))
-        return
-    same = stock.siblings[code]
-    place = int(np.searchsorted(same, code)) + (1 if random.random() < 0.4 else -1)
-    row[at] = same[min(max(place, 0), len(same) - 1)]
-
-
-def _step_material(stock: Stock, row: Integers, at: int, random: np.random.Generator) -> None:
-    """Another material near the same place in its range of gauges."""
-    code = int(row[at])
-    same = stock.siblings[code]
-    other = stock.siblings[int(random.integers(1, stock.choices + 1))]
-    share = np.searchsorted(same, code) / max(len(same) - 1, 1)
-    _put(stock, row, at, int(other[round(float(share) * (len(other) - 1))]), random)
-
-
 class _SameGenes(DuplicateElimination):  # type: ignore[misc]
     """Finds equal genes exactly."""
 
@@ -169,37 +116,30 @@ class _SameGenes(DuplicateElimination):  # type: ignore[misc]
 
 
 @dataclass(frozen=True)
-class IslandTask:
-    """Everything an epoch of one island depends on."""
+class Found:
+    """What a call brings: the archive that it ends with, how many attenuations it needed, and an island's population.
 
-    stock: Stock
-    population: Integers
-    archive: Archive
-    seed: tuple[int, ...]
+    The population of other calls is empty.
+    """
 
-
-@dataclass(frozen=True)
-class IslandResult:
-    """What an epoch of one island leaves."""
-
-    population: Integers
     archive: Archive
     computed: int
+    population: Integers
 
 
-def run_island(task: IslandTask) -> IslandResult:
-    """Run one epoch of an island; a pure function of its task."""
-    archive = task.archive.copy()
-    problem = StackProblem(task.stock, archive)
+def run_island(stock: Stock, population: Integers, known: Archive, seed: tuple[int, ...]) -> Found:
+    """Run one epoch of an island; a pure function."""
+    archive = known.copy()
+    problem = StackProblem(stock, archive)
     algorithm = NSGA2(
-        pop_size=len(task.population),
-        sampling=task.population,
-        crossover=StackCrossover(task.stock),
-        mutation=StackMutation(task.stock),
+        pop_size=len(population),
+        sampling=population,
+        crossover=StackCrossover(stock),
+        mutation=StackMutation(stock),
         eliminate_duplicates=_SameGenes(),
     )
-    seed = int(np.random.SeedSequence(task.seed).generate_state(1)[0])
-    algorithm.setup(problem, termination=NoTermination(), seed=seed, verbose=False)
+    number = int(np.random.SeedSequence(seed).generate_state(1)[0])
+    algorithm.setup(problem, termination=NoTermination(), seed=number, verbose=False)
     for _ in range(GENERATIONS):
         candidates = algorithm.ask()
         if candidates is None:
@@ -207,12 +147,21 @@ def run_island(task: IslandTask) -> IslandResult:
         algorithm.evaluator.eval(problem, candidates)
         algorithm.tell(infills=candidates)
     # Equal stacks were dropped; the size of a population stays.
-    population = np.resize(algorithm.pop.get("X").astype(np.int64), task.population.shape)
-    return IslandResult(population, archive, problem.computed)
+    left = np.resize(algorithm.pop.get("X").astype(np.int64), population.shape)
+    return Found(archive, problem.computed, left)
 
 
-Mapper = Callable[[Callable[[IslandTask], IslandResult], Iterable[IslandTask]], Iterable[IslandResult]]
-"""Runs a function over tasks and returns the results in order, for example the built-in map."""
+def try_moves(stock: Stock, stacks: Integers, known: Archive, seed: int | None) -> Found:
+    """Try all local moves of some stacks, or with a seed the moves of two positions; a pure function."""
+    archive = known.copy()
+    computed = 0
+    for genes in stacks:
+        if seed is None:
+            moved = neighbours(stock, genes)
+        else:
+            moved = pair_neighbours(stock, genes, np.random.default_rng((seed, *genes.tolist())))
+        computed += record(stock, archive, moved).computed
+    return Found(archive, computed, stacks[:0])
 
 
 class Explorer:
@@ -227,10 +176,16 @@ class Explorer:
         Stacks on each island.
     look : bool
         Whether to start from a quick look for the largest margin.
+    workers : Workers, optional
+        Who runs the islands and tries the moves; this process when left out. The result does not depend on it.
     """
 
-    def __init__(self, stock: Stock, seed: int, population: int, look: bool = True) -> None:
+    def __init__(
+        self, stock: Stock, seed: int, population: int, look: bool = True, workers: Workers | None = None
+    ) -> None:
         self.stock, self.seed = stock, seed
+        self._workers = Serial() if workers is None else workers
+        self._published: Any = None
         self.archive = Archive(len(stock.compiled.problem.search.objectives), 2 * stock.positions)
         self.computed = 0
         self.epoch = 0
@@ -247,41 +202,60 @@ class Explorer:
         """Whether the last epochs brought nothing new."""
         return self.quiet >= QUIET_EPOCHS
 
-    def step(self, mapper: Mapper = map) -> None:
-        """Run one epoch of every island, merge and polish."""
-        tasks = [
-            IslandTask(self.stock, self._migrated(island), self.archive, (self.seed, self.epoch + 1, island))
+    def step(self, watch: Callable[[], None] = lambda: None) -> None:
+        """Run one epoch of every island, merge and polish.
+
+        ``watch`` is called now and then; if it raises, the state is that before the epoch.
+        """
+        before = self.state()
+        try:
+            self._run_epoch(watch)
+        except BaseException:
+            self.restore(before)
+            raise
+
+    def _run_epoch(self, watch: Callable[[], None]) -> None:
+        before = self.archive.values
+        islands = [
+            (self._migrated(island), self.archive, (self.seed, self.epoch + 1, island))
             for island in range(len(self.populations))
         ]
-        before = self.archive.values
-        # All islands first: none may see what another brings to the archive.
-        for island, result in enumerate(list(mapper(run_island, tasks))):
-            self.populations[island] = result.population
-            self.archive.add(result.archive.values, result.archive.codes)
-            self.computed += result.computed
-        self.polish()
+        found = self._gather(run_island, islands, watch)
+        self.populations = [result.population for result in found]
+        self.polish(watch)
         self.epoch += 1
         self.quiet = self.quiet + 1 if np.array_equal(before, self.archive.values) else 0
 
-    def polish(self) -> None:
+    def polish(self, watch: Callable[[], None] = lambda: None) -> None:
         """Try every local move of every archive member, then moves of two positions at once, until nothing improves."""
-        kinds = ((neighbours, self._polished), (self._pairs, self._polished_pairs))
-        while work := next(((moves, tried, fresh) for moves, tried in kinds if (fresh := self._untried(tried))), None):
-            moves, tried, fresh = work
-            for genes in fresh:
-                tried.add(genes.tobytes())
-                self.computed += record(self.stock, self.archive, moves(self.stock, genes)).computed
+        kinds = ((None, self._polished), (self.seed, self._polished_pairs))
+        while work := next(((seed, tried, fresh) for seed, tried in kinds if len(fresh := self._untried(tried))), None):
+            seed, tried, fresh = work
+            parts = [fresh[start : start + _TOGETHER] for start in range(0, len(fresh), _TOGETHER)]
+            self._gather(try_moves, [(part, self.archive, seed) for part in parts], watch)
+            tried.update(genes.tobytes() for genes in fresh)
 
-    def _untried(self, tried: set[bytes]) -> list[Integers]:
-        return [genes for genes in self.archive.codes if genes.tobytes() not in tried]
+    def _gather(
+        self, function: Callable[..., Found], arguments: list[tuple[Any, ...]], watch: Callable[[], None]
+    ) -> list[Found]:
+        """Run a function for every tuple of arguments, and take what is found once all is done."""
+        if self._published is None:
+            self._published = self._workers.publish(self.stock)
+        # All first: none may see what another brings to the archive.
+        found = gather(self._workers, function, self._published, arguments, watch)
+        for result in found:
+            self.archive.add(result.archive.values, result.archive.codes)
+            self.computed += result.computed
+        return found
 
-    def _pairs(self, stock: Stock, genes: Integers) -> Integers:
-        return pair_neighbours(stock, genes, np.random.default_rng((self.seed, *genes.tolist())))
+    def _untried(self, tried: set[bytes]) -> Integers:
+        fresh = [genes.tobytes() not in tried for genes in self.archive.codes]
+        return np.asarray(self.archive.codes[np.array(fresh, dtype=bool)])
 
-    def take(self, genes: Integers) -> None:
+    def take(self, genes: Integers, watch: Callable[[], None] = lambda: None) -> None:
         """Judge stacks known from elsewhere, keep the feasible ones, and polish them."""
         self.computed += record(self.stock, self.archive, self.stock.tidy(genes)).computed
-        self.polish()
+        self.polish(watch)
 
     def state(self) -> dict[str, NDArray[np.int64]]:
         """Return the state between epochs as plain arrays."""
@@ -320,76 +294,3 @@ class Explorer:
         record(self.stock, self.archive, self.stock.tidy(genes[None]))
         for population in self.populations:
             population[0] = genes
-
-
-def random_genes(stock: Stock, count: int, random: np.random.Generator) -> Integers:
-    """Random stacks of one sheet up to the largest number."""
-    m = stock.positions
-    genes = np.zeros((count, 2 * m), dtype=np.int64)
-    sheets = random.integers(1, m + 1, count)
-    for row, used in zip(genes, sheets, strict=True):
-        for at in range(int(used)):
-            _put(stock, row, at, int(random.integers(1, stock.choices + 1)), random)
-    return stock.tidy(genes)
-
-
-def neighbours(stock: Stock, genes: Integers) -> Integers:
-    """All stacks one local move away: a sheet dropped, replaced, inserted or swapped, a free thickness stepped."""
-    m = stock.positions
-    used = int(np.count_nonzero(genes[:m]))
-    found: list[Integers] = []
-    thicknesses = _typical_thickness(stock, genes)
-    for at in range(used):
-        found.append(np.delete(genes, (at, m + at))[None])
-        replaced = np.repeat(genes[None], stock.choices, axis=0)
-        replaced[:, at] = np.arange(1, stock.choices + 1)
-        replaced[:, m + at] = thicknesses[1:]
-        found.append(replaced)
-        for other in range(at + 1, used):
-            swapped = genes.copy()
-            swapped[[at, other]] = genes[[other, at]]
-            swapped[[m + at, m + other]] = genes[[m + other, m + at]]
-            found.append(swapped[None])
-        if genes[m + at]:
-            stepped = np.repeat(genes[None], len(_STEPS), axis=0)
-            stepped[:, m + at] = np.round(genes[m + at] * _STEPS)
-            found.append(stepped)
-    if used < m:
-        for place in range(used + 1):
-            grown = np.insert(genes[: m - 1], place, 0)
-            room = np.concatenate([grown, np.insert(genes[m:-1], place, 0)])
-            inserted = np.repeat(room[None], stock.choices, axis=0)
-            inserted[:, place] = np.arange(1, stock.choices + 1)
-            inserted[:, m + place] = thicknesses[1:]
-            found.append(inserted)
-    width = 2 * m
-    padded = [part if part.shape[1] == width else np.insert(part, [m - 1, 2 * m - 2], 0, axis=1) for part in found]
-    return np.unique(stock.tidy(np.concatenate(padded)), axis=0)
-
-
-def pair_neighbours(stock: Stock, genes: Integers, random: np.random.Generator) -> Integers:
-    """Stacks that differ in two positions, empty ones included; `MOST_PAIRS` of them at random if there are more."""
-    m, choices = stock.positions, stock.choices + 1
-    places = np.array([(i, j) for i in range(m) for j in range(i + 1, m)], dtype=np.int64).reshape(-1, 2)
-    total = len(places) * choices * choices
-    picked = np.arange(total) if total <= MOST_PAIRS else random.choice(total, MOST_PAIRS, replace=False)
-    place, one, other = np.unravel_index(picked, (len(places), choices, choices))
-    found = np.repeat(genes[None], len(picked), axis=0)
-    row = np.arange(len(picked))
-    thicknesses = _typical_thickness(stock, genes)
-    for side, code in ((0, one), (1, other)):
-        at = places[place, side]
-        found[row, at] = code
-        found[row, m + at] = thicknesses[code]
-    return stock.tidy(found)
-
-
-_STEPS = np.array([0.5, 0.7, 0.85, 0.93, 0.97, 0.99, 0.998, 1.002, 1.01, 1.03, 1.07, 1.15])
-
-
-def _typical_thickness(stock: Stock, genes: Integers) -> Integers:
-    """Thickness to try each code from 0 with: that of the stack's free sheets, or the middle of the range."""
-    own = genes[stock.positions :]
-    middle = np.sqrt(stock.ranges_pm[:, 0].astype(float) * stock.ranges_pm[:, 1]).astype(np.int64)
-    typical = int(np.median(own[own > 0])) if np.any(own > 0) else 0
-    return np.where(middle > 0, typical or middle, 0)

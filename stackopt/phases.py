@@ -10,46 +10,30 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from stackopt import demands, evaluate
+from stackopt import confirm, demands, evaluate
 from stackopt.archive import Archive
-from stackopt.compiled import COST_UNIT, MARGIN_SLACK_DB, MASS_UNIT, THICKNESS_UNIT, CompiledProblem, compile_problem
+from stackopt.compiled import COST_UNIT, MASS_UNIT, THICKNESS_UNIT, CompiledProblem, compile_problem
 from stackopt.explain import explain
 from stackopt.explore import Explorer
-from stackopt.front import Front, FrontRow
-from stackopt.model import with_bonds
+from stackopt.front import Front
 from stackopt.problem import Problem, Stack
 from stackopt.proof import Collector, Prover, Tally, count_stacks, why_not_provable
 from stackopt.scout import scout
 from stackopt.status import Status, Watcher
 from stackopt.stock import Stock
+from stackopt.workers import Serial, Workers
 
 Integers = NDArray[np.int64]
 
 SEARCH_ERROR_DB = 2e-3
 """Quadrature error of the first round, dB."""
-DENSITY = 10
-"""The confirmation's points for every point of the search grid."""
 MAX_ROUNDS = 60
-
-
-@dataclass(frozen=True)
-class _Confirmed:
-    """Stacks judged on the dense grid: the front's row of each, its sums, its margin, and where that is tightest."""
-
-    rows: Integers
-    stacks: list[Stack]
-    totals: Integers
-    margin_db: NDArray[np.float64]
-    decisive_db: NDArray[np.float64]
-    extra: list[dict[str, float | str]]
-    frequency_hz: NDArray[np.float64]
-    requirement: Integers
 
 
 class Search:
@@ -60,12 +44,13 @@ class Search:
     problem : Problem
     seed : int, optional
         Instead of the problem's own.
-    workers : int
-        Threads for the proof.
+    workers : Workers, optional
+        Who explores and proves; this process when left out. The front does not depend on it.
     """
 
-    def __init__(self, problem: Problem, seed: int | None = None, workers: int = 1) -> None:
-        self.problem, self.workers = problem, workers
+    def __init__(self, problem: Problem, seed: int | None = None, workers: Workers | None = None) -> None:
+        self.problem = problem
+        self.workers = Serial() if workers is None else workers
         self.seed = problem.search.random_seed if seed is None else seed
         self.obstacle = why_not_provable(problem)
         self.extra_hz: list[list[float]] = [[] for _ in problem.requirements]
@@ -75,6 +60,7 @@ class Search:
         self.seconds = {"exploring": 0.0, "proving": 0.0, "confirming": 0.0}
         self.tally = Tally()
         self.prover: Prover | None = None
+        self._margins: tuple[Integers | None, dict[str, float]] = (None, {})
         self._begin_round()
 
     def run(
@@ -82,22 +68,29 @@ class Search:
     ) -> Front:
         """Run to the end or to the deadline (`time.monotonic`).
 
-        ``save`` is called wherever the state may be saved. The watcher may raise to interrupt; the state then is that
-        of the last call of ``save`` or later, and still good.
+        ``save`` is called wherever the state may be saved. The watcher is called several times a second and may raise
+        to interrupt; the state then is that of the last call of ``save`` or later, and still good.
         """
         while True:
             self._explore(watcher, deadline, save)
             self._prove(watcher, deadline, save)
             watcher(Status("confirming", front_size=len(self.archive)))
             started = time.monotonic()
-            confirmed = self._confirm()
+            numbers, stacks = self._candidates()
+            judged = self._judge(stacks)
             self.seconds["confirming"] += time.monotonic() - started
-            failed = self._failures(confirmed)
+            failed = self._failures(numbers, judged)
             out_of_time = time.monotonic() >= deadline or self.round >= MAX_ROUNDS
             if not failed or out_of_time:
-                return self._front(confirmed, bool(failed))
-            self._refine(failed)
+                return self._front(numbers, judged, bool(failed))
+            self._refine(failed, lambda: watcher(Status("looking closer", front_size=len(self.archive))))
             save()
+
+    def front_so_far(self) -> Front:
+        """Those of the best stacks known so far that hold on the dense grid, never called complete."""
+        judged = self._judge([stack for stack in self._known_stacks() if demands.holds_at_level(self.problem, stack)])
+        rows = tuple(judged.row(n) for n in np.flatnonzero(judged.holds).tolist())
+        return Front(self.problem, rows, False, "So far: the search goes on, and nothing is proved.")
 
     def start_from(self, stacks: list[Stack]) -> None:
         """Skip exploring and prove from known stacks; those that are no stacks of the problem are passed over."""
@@ -128,14 +121,14 @@ class Search:
         arrays = dict(self.explorer.state())
         if self.prover is not None:
             arrays |= {
-                "proof_done": self.prover.done,
+                "proof_pending": self.prover.unopened,
                 "proof_values": self.archive.values,
                 "proof_codes": self.archive.codes,
             }
         text = {
             "seed": self.seed,
             "round": self.round,
-            "extra_hz": self.extra_hz,
+            "extra_hz": [list(frequencies) for frequencies in self.extra_hz],
             "error_db": self.error_db,
             "exploring": self.exploring,
             "seconds": self.seconds,
@@ -149,12 +142,12 @@ class Search:
         self.extra_hz, self.exploring = text["extra_hz"], text["exploring"]
         self.seconds, self.tally = dict(text["seconds"]), Tally(**text["tally"])
         self.compiled = compile_problem(self.problem, error_db=self.error_db, extra_hz=self.extra_hz)
-        self.explorer = Explorer(Stock(self.compiled), self.seed, len(arrays["populations"][0]), look=False)
+        self.explorer = self._new_explorer(len(arrays["populations"][0]), look=False)
         self.explorer.restore(arrays)
         self.prover = None
-        if "proof_done" in arrays:
+        if "proof_pending" in arrays:
             prover = self._begin_proof()
-            prover.done[:] = arrays["proof_done"]
+            prover.go_on_from(arrays["proof_pending"])
             prover.archive.values, prover.archive.codes = arrays["proof_values"], arrays["proof_codes"]
 
     # Phases -----------------------------------------------------------------------------------------------------------
@@ -166,11 +159,22 @@ class Search:
 
     def _begin_round(self) -> None:
         self.compiled = compile_problem(self.problem, error_db=self.error_db, extra_hz=self.extra_hz)
-        self.explorer = Explorer(Stock(self.compiled), self.seed, self.problem.search.population)
+        self.explorer = self._new_explorer(self.problem.search.population, look=True)
         self.prover = None
 
-    def _refine(self, failed: list[tuple[int, float]]) -> None:
+    def _new_explorer(self, population: int, look: bool) -> Explorer:
+        return Explorer(Stock(self.compiled), self.seed, population, look, self.workers)
+
+    def _refine(self, failed: list[tuple[int, float]], watch: Callable[[], None]) -> None:
         """Begin the next round with the frequencies at which stacks failed; what was found so far is judged anew."""
+        arrays, text = self.state()
+        try:
+            self._begin_finer_round(failed, watch)
+        except BaseException:
+            self.restore(arrays, text)
+            raise
+
+    def _begin_finer_round(self, failed: list[tuple[int, float]], watch: Callable[[], None]) -> None:
         known = [
             set(self.compiled.rows.frequency_hz[self.compiled.rows.requirement == n]) for n in range(len(self.extra_hz))
         ]
@@ -189,19 +193,24 @@ class Search:
         self._begin_round()
         self.explorer.populations = populations
         self.explorer.computed, self.explorer.epoch = computed, epoch
-        self.explorer.take(np.concatenate(old_genes))
+        self.explorer.take(np.concatenate(old_genes), watch)
         self.exploring = self.obstacle is not None  # a proof finds whatever is missing by itself
 
     def _explore(self, watcher: Watcher, deadline: float, save: Callable[[], None]) -> None:
         started, done_before = time.monotonic(), self.explorer.computed
+        rate = ""
+
+        def watch() -> None:
+            watcher(self._status("exploring", None, rate, None))
+
         while self.exploring and time.monotonic() < deadline:
             begun = time.monotonic()
-            self.explorer.step()
+            self.explorer.step(watch)
             self.seconds["exploring"] += time.monotonic() - begun
             self.exploring = not self.explorer.finished
             save()
-            rate = (self.explorer.computed - done_before) / max(time.monotonic() - started, 1e-9)
-            watcher(self._status("exploring", None, f"{rate:,.0f} stacks/s", None))
+            rate = self._rate(self.explorer.computed - done_before, time.monotonic() - started)
+            watch()
         if self.obstacle is None:
             self.exploring = False  # a proof finds whatever is missing by itself
 
@@ -210,7 +219,6 @@ class Search:
             return
         prover = self.prover or self._begin_proof()
         watcher(self._status("preparing the proof (compiles once on a fresh machine)", None, "", None))
-        prover.warm()
         started, judged_before, covered_before = time.monotonic(), prover.tally.judged, prover.covered
 
         def watch() -> None:
@@ -220,9 +228,9 @@ class Search:
                 return
             gained = prover.covered - covered_before
             left = elapsed * (1.0 - prover.covered) / gained if gained > 0.0 else None
-            rate = (prover.tally.judged - judged_before) / elapsed
             save()
-            watcher(self._status("proving", prover.covered, f"{rate:,.0f} stacks/s", left))
+            rate = self._rate(prover.tally.judged - judged_before, elapsed)
+            watcher(self._status("proving", prover.covered, rate, left))
 
         try:
             prover.run(self.workers, deadline, watch)
@@ -241,7 +249,36 @@ class Search:
         if len(self.archive):
             for column, name in enumerate(self.problem.search.objectives):
                 best[name] = _objective_text(name, int(self.archive.values[:, column].min()), self.problem.currency)
-        return Status(phase, fraction, rate, len(self.archive), best, left)
+        proved = None if self.prover is None else self.prover.covered
+        return Status(phase, fraction, rate, len(self.archive), best, left, self._margins_so_far(), proved)
+
+    def _rate(self, judged: int, seconds: float) -> str:
+        words = f"{judged / max(seconds, 1e-9):,.0f} stacks/s"
+        return f"{words} on {self.workers.words}" if self.workers.words else words
+
+    def _margins_so_far(self) -> dict[str, float]:
+        """Largest margin for each requirement among the best stacks, or of the nearest one, dB."""
+        values, margins = self._margins
+        if values is not self.archive.values:
+            compiled, codes = self._tabulated_so_far()
+            over = evaluate.attenuation_rows(compiled, codes) - compiled.rows.required_db
+            names = [requirement.name for requirement in self.problem.requirements]
+            margins = {
+                name: float(np.max(np.min(over[:, compiled.rows.requirement == n], axis=1)))
+                for n, name in enumerate(names)
+                if len(over)
+            }
+            self._margins = self.archive.values, margins
+        return margins
+
+    def _tabulated_so_far(self) -> tuple[CompiledProblem, Integers]:
+        """Return the best stacks as codes of a compiled problem; while there are none, the one nearest to the mask."""
+        codes = self.archive.codes
+        if len(codes) == 0 and self.compiled.sheets:
+            codes = scout(self.compiled).codes[None]
+        elif self.prover is None:
+            return self.explorer.stock.tabulated(codes) if len(codes) else (self.compiled, codes)
+        return self.compiled, codes
 
     def alternatives(self, front: Front, within: float, watcher: Watcher, deadline: float = np.inf) -> Front:
         """Add to a complete front every feasible stack that no member beats by more than a factor in all objectives.
@@ -261,8 +298,8 @@ class Search:
             deadline,
             lambda: watcher(self._status("collecting alternatives", collector.covered, "", None)),
         )
-        judged = self._judge_densely(evaluate.decode(self.compiled, collector.codes))
-        rows = [self._row(judged, n) for n in np.flatnonzero(judged.decisive_db >= -MARGIN_SLACK_DB).tolist()]
+        judged = self._judge(evaluate.decode(self.compiled, collector.codes))
+        rows = [judged.row(n) for n in np.flatnonzero(judged.holds).tolist()]
         rows.sort(key=lambda row: [row.objective(name) for name in self.problem.search.objectives])
         whole = collector.complete and not collector.overflowed and front.complete
         share = f"{100.0 * within:g} %"
@@ -273,34 +310,13 @@ class Search:
 
     # Confirmation -----------------------------------------------------------------------------------------------------
 
-    def _confirm(self) -> _Confirmed:
-        """Judge every stack that reaches the objectives of the front on the dense grid."""
-        rows, stacks = self._candidates()
-        return replace(self._judge_densely(stacks), rows=rows)
+    def _judge(self, stacks: list[Stack]) -> confirm.Judged:
+        return confirm.judge(self.compiled, stacks, self.error_db, self.extra_hz)
 
-    def _judge_densely(self, stacks: list[Stack]) -> _Confirmed:
-        none = np.empty(0, dtype=np.int64)
-        if not stacks:
-            return _Confirmed(none, [], none, np.empty(0), np.empty(0), [], np.empty(0), none)
-        sheets = tuple(dict.fromkeys(sheet for stack in stacks for sheet in stack))
-        dense = compile_problem(self.problem, sheets, DENSITY, self.error_db / 10.0, self.extra_hz)
-        codes = evaluate.encode(dense, stacks)
-        totals = evaluate.sums(dense, codes)
-        margin, row = evaluate.margins(dense, codes, totals)
-        decisive, row = demands.decisive_margins(dense, codes, margin, row, self._on_search_grid(dense))
-        extra = demands.extra_columns(dense, codes)
-        where, which = dense.rows.frequency_hz[row], dense.rows.requirement[row]
-        return _Confirmed(none, stacks, totals, margin, decisive, extra, where, which)
-
-    def _on_search_grid(self, dense: CompiledProblem) -> NDArray[np.bool_]:
-        """Which rows of the dense grid are rows of the search grid too."""
-        known = np.zeros(len(dense.rows.frequency_hz), dtype=bool)
-        for number in range(len(self.problem.requirements)):
-            grid = self.compiled.rows.frequency_hz[self.compiled.rows.requirement == number]
-            here = dense.rows.requirement == number
-            near = np.isclose(dense.rows.frequency_hz[here][:, None], grid, rtol=1e-9, atol=0.0)
-            known[here] = np.any(near, axis=1)
-        return known
+    def _known_stacks(self) -> list[Stack]:
+        if self.prover is None:
+            return self.explorer.stock.stacks(self.archive.codes)
+        return evaluate.decode(self.compiled, self.archive.codes)
 
     def _candidates(self) -> tuple[Integers, list[Stack]]:
         if self.obstacle is not None:
@@ -311,54 +327,36 @@ class Search:
         rows, codes = equal_stacks(self.compiled, self.archive.values)
         return rows, evaluate.decode(self.compiled, codes)
 
-    def _failures(self, confirmed: _Confirmed) -> list[tuple[int, float]]:
-        """Worst (requirement, frequency) of every front row none of whose stacks passes."""
+    def _failures(self, numbers: Integers, judged: confirm.Judged) -> list[tuple[int, float]]:
+        """Worst (requirement, frequency) of every front row none of whose stacks passes; their rows are ``numbers``."""
         failures = []
-        for row in range(len(self.archive)):
-            here = np.flatnonzero(confirmed.rows == row)
-            best = here[np.argmax(confirmed.decisive_db[here])]
-            if confirmed.decisive_db[best] < -MARGIN_SLACK_DB:
-                failures.append((int(confirmed.requirement[best]), float(confirmed.frequency_hz[best])))
+        for number in range(len(self.archive)):
+            here = np.flatnonzero(numbers == number)
+            best = here[np.argmax(judged.decisive_db[here])]
+            if not judged.holds[best]:
+                failures.append((int(judged.requirement[best]), float(judged.frequency_hz[best])))
         return failures
 
-    def _front(self, confirmed: _Confirmed, some_failed: bool) -> Front:
+    def _front(self, numbers: Integers, judged: confirm.Judged, some_failed: bool) -> Front:
         """Front of the confirmed stacks; of equal ones a row shows that of largest margin, then fewest sheets."""
         ranked, equals = [], []
         lost_at_level = 0
         for number in range(len(self.archive)):
-            here = np.flatnonzero((confirmed.rows == number) & (confirmed.decisive_db >= -MARGIN_SLACK_DB))
-            holding = [n for n in here.tolist() if demands.holds_at_level(self.problem, confirmed.stacks[n])]
+            here = np.flatnonzero((numbers == number) & judged.holds)
+            holding = [n for n in here.tolist() if demands.holds_at_level(self.problem, judged.stacks[n])]
             lost_at_level += len(here) > 0 and not holding
             if not holding:
                 continue
             best, *others = sorted(
-                holding, key=lambda n: (-round(float(confirmed.decisive_db[n]), 6), len(confirmed.stacks[n]))
+                holding, key=lambda n: (-round(float(judged.decisive_db[n]), 6), len(judged.stacks[n]))
             )
-            ranked.append(self._row(confirmed, best))
-            equals += [(len(ranked), self._row(confirmed, n)) for n in others]
+            ranked.append(judged.row(best))
+            equals += [(len(ranked), judged.row(n)) for n in others]
         complete = self.prover is not None and self.prover.complete and not some_failed and not lost_at_level
         statement = self._statement(len(ranked), complete, some_failed)
         if lost_at_level:
             statement += f" {lost_at_level} left out: they fail where the drive changes their permeability."
         return Front(self.problem, tuple(ranked), complete, statement, tuple(equals))
-
-    def _row(self, confirmed: _Confirmed, n: int) -> FrontRow:
-        stack = confirmed.stacks[n]
-        mass, cost, thickness = confirmed.totals[n]
-        priced = all(
-            self.problem.materials[layer.material].price(layer.thickness_m) is not None
-            for layer in with_bonds(self.problem, stack)
-        )
-        return FrontRow(
-            stack=stack,
-            mass_kg_per_m2=float(mass / MASS_UNIT),
-            cost_per_m2=float(cost / COST_UNIT) if priced else float("nan"),
-            thickness_m=float(thickness / THICKNESS_UNIT),
-            margin_db=float(confirmed.margin_db[n]),
-            tightest_hz=float(confirmed.frequency_hz[n]),
-            requirement=self.problem.requirements[confirmed.requirement[n]].name,
-            extra=confirmed.extra[n],
-        )
 
     def _statement(self, size: int, complete: bool, some_failed: bool) -> str:
         number = count_stacks(len(self.compiled.sheets), self.compiled.rules.max_sheets)
@@ -367,7 +365,7 @@ class Search:
         if complete:
             return (
                 f"Complete: all {number:.3g} stacks of the sheets, rules aside, are settled; none is missing, "
-                f"and every stack of the front holds on a grid {DENSITY} times denser."
+                f"and every stack of the front holds on a grid {confirm.DENSITY} times denser."
             )
         if self.obstacle is not None:
             settled = f"Explored, not proved: {self.obstacle}."

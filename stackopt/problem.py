@@ -6,6 +6,7 @@ checked by the readers, which know where each value stands.
 
 from __future__ import annotations
 
+import copyreg
 import itertools
 import math
 from collections.abc import Mapping
@@ -24,6 +25,14 @@ PROVABLE_OBJECTIVES = ("mass", "cost", "thickness", "sheets")
 """Objectives that only grow when a sheet is added."""
 ASSUMPTIONS = ("nominal", "worst", "yield")
 """What values of the materials a search may assume."""
+
+
+def _read_only(content: dict[str, object]) -> MappingProxyType[str, object]:
+    return MappingProxyType(content)
+
+
+# Problems travel to worker processes; a read-only view of a dictionary does not know by itself how.
+copyreg.pickle(MappingProxyType, lambda view: (_read_only, (dict(view),)))
 
 
 @dataclass(frozen=True)

@@ -26,7 +26,8 @@ from stackopt.problem import (
     StackRules,
     Tolerance,
 )
-from stackopt.proof import Prover, mirror_holds
+from stackopt.proof import Prover
+from stackopt.shares import mirror_holds
 from stackopt.stock import Stock
 from stackopt.tolerance import tolerances_of
 

@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 
 from stackopt import descent
 from stackopt.compiled import compile_problem
-from stackopt.proof import Tables
+from stackopt.shares import Tables
 
 MAX_SHEETS = 3
 Vector = tuple[int, int, int, int]

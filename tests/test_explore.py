@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 import itertools
-from collections.abc import Callable, Iterable, Mapping
-from concurrent.futures import ThreadPoolExecutor
+from collections.abc import Mapping
 from dataclasses import replace
 from functools import cache
 from typing import Any
@@ -13,24 +12,15 @@ import brute_force
 import numpy as np
 import pytest
 from builders import LOOPS, MATERIALS, build_problem, film, material, ranged
-from hypothesis import given
-from hypothesis import strategies as st
 from numpy.typing import NDArray
 
-from stackopt import evaluate, explore
+from stackopt import evaluate
 from stackopt.compiled import MARGIN_SLACK_DB, compile_problem
-from stackopt.explore import (
-    ISLANDS,
-    QUIET_EPOCHS,
-    Explorer,
-    StackCrossover,
-    mutate,
-    neighbours,
-    pair_neighbours,
-    random_genes,
-)
+from stackopt.explore import ISLANDS, QUIET_EPOCHS, Explorer
+from stackopt.moves import neighbours, pair_neighbours
 from stackopt.problem import Field, MagneticNearField, Mask, PlaneWave, Problem, Sheet
 from stackopt.stock import Stock
+from stackopt.workers import Processes, Serial
 
 Integers = NDArray[np.int64]
 
@@ -192,6 +182,16 @@ def listed(state: Mapping[str, Integers]) -> dict[str, Any]:
     return {name: value.tolist() for name, value in state.items()}
 
 
+class Backwards(Serial):
+    """Runs the last call first."""
+
+    def finished(self, timeout_s: float = 0.0) -> list[tuple[Any, Any]]:
+        self._waiting.reverse()
+        found = super().finished()
+        self._waiting.reverse()
+        return found
+
+
 class TestSeed:
     @STOCKS
     def test_same_seed_same_result(self, stock: Stock) -> None:
@@ -201,25 +201,47 @@ class TestSeed:
         other = explored(GAUGES, 1, seed=2).state()
         assert listed(other)["populations"] != listed(way(GAUGES)[1])["populations"]
 
+    @pytest.mark.slow
     def test_islands_may_run_anywhere(self) -> None:
-        """Threads that finish in any order change nothing: an island depends on its task only."""
-        explorer = Explorer(GAUGES, 3, 16)
-        with ThreadPoolExecutor(3) as pool:
-            for _ in range(2):
-                explorer.step(pool.map)
-        assert listed(explorer.state()) == listed(way(GAUGES)[2])
+        """Processes that finish in any order change nothing: what a call finds depends on its arguments only."""
+        with Processes(3) as workers:
+            for stock in NAMED.values():
+                explorer = Explorer(stock, 3, 16, workers=workers)
+                for _ in range(2):
+                    explorer.step()
+                assert listed(explorer.state()) == listed(way(stock)[2])
 
-    def test_islands_may_run_backwards(self) -> None:
-        def backwards(function: Callable[[Any], Any], tasks: Iterable[Any]) -> list[Any]:
-            return [function(task) for task in reversed(list(tasks))][::-1]
-
-        explorer = Explorer(GAUGES, 3, 16)
+    @STOCKS
+    def test_islands_may_run_backwards(self, stock: Stock) -> None:
+        explorer = Explorer(stock, 3, 16, workers=Backwards())
         for _ in range(2):
-            explorer.step(backwards)
-        assert listed(explorer.state()) == listed(way(GAUGES)[2])
+            explorer.step()
+        assert listed(explorer.state()) == listed(way(stock)[2])
+
+
+class Stopped(Exception):  # noqa: N818 - the name says what happened
+    pass
 
 
 class TestState:
+    @STOCKS
+    @pytest.mark.parametrize(("epochs", "calls"), [(1, 1), (1, ISLANDS), (0, ISLANDS + 1), (0, ISLANDS + 3)])
+    def test_stopped_within_an_epoch(self, stock: Stock, epochs: int, calls: int) -> None:
+        """The state is that before the epoch, and the epoch can be run again; the last ones stop within the polish."""
+        explorer = explored(stock, epochs)
+        left = [calls]
+
+        def watch() -> None:
+            left[0] -= 1
+            if left[0] == 0:
+                raise Stopped
+
+        with pytest.raises(Stopped):
+            explorer.step(watch)
+        assert listed(explorer.state()) == listed(way(stock)[epochs])
+        explorer.step()
+        assert listed(explorer.state()) == listed(way(stock)[epochs + 1])
+
     @STOCKS
     @pytest.mark.parametrize("epochs", [0, 1, 2])
     def test_goes_on_exactly(self, stock: Stock, epochs: int) -> None:
@@ -278,7 +300,8 @@ class TestPolish:
     def test_no_local_move_is_left(self, stock: Stock) -> None:
         explorer = explored(stock, 1)
         for genes in explorer.archive.codes:
-            moved = np.concatenate([neighbours(stock, genes), explorer._pairs(stock, genes)])
+            pairs = pair_neighbours(stock, genes, np.random.default_rng((explorer.seed, *genes.tolist())))
+            moved = np.concatenate([neighbours(stock, genes), pairs])
             judged = stock.judge(moved, explorer.archive.dominates)
             assert explorer.archive.covers(judged.values[judged.feasible]).all()
 
@@ -301,132 +324,3 @@ class TestPolish:
         (stack,) = GAUGES.stacks(with_look.archive.codes)
         margin, _ = evaluate.margins(GAUGES.compiled, evaluate.encode(GAUGES.compiled, [stack]))
         assert margin[0] >= -MARGIN_SLACK_DB
-
-
-def check_genes(stock: Stock, genes: Integers, least_sheets: int = 1) -> None:
-    """Packed codes that exist, at least one sheet, thicknesses in their ranges."""
-    m = stock.positions
-    assert genes.shape[1] == 2 * m
-    assert np.array_equal(stock.tidy(genes), genes)
-    codes, thickness = genes[:, :m], genes[:, m:]
-    assert (codes >= 0).all()
-    assert (codes <= stock.choices).all()
-    assert (np.count_nonzero(codes, axis=1) >= least_sheets).all()
-    assert (thickness >= stock.ranges_pm[codes, 0]).all()
-    assert (thickness <= stock.ranges_pm[codes, 1]).all()
-
-
-def sheets_in(stock: Stock, genes: Integers) -> list[tuple[int, int]]:
-    m = stock.positions
-    return sorted((int(c), int(t)) for c, t in zip(genes[:m], genes[m:], strict=True) if c)
-
-
-class TestMoves:
-    @STOCKS
-    @given(seed=st.integers(0, 2**32 - 1))
-    def test_random_genes(self, stock: Stock, seed: int) -> None:
-        genes = random_genes(stock, 30, np.random.default_rng(seed))
-        check_genes(stock, genes)
-        assert len(genes) == 30
-
-    @STOCKS
-    @given(seed=st.integers(0, 2**32 - 1))
-    def test_mutation_is_one_change(self, stock: Stock, seed: int) -> None:
-        random = np.random.default_rng(seed)
-        genes = random_genes(stock, 30, random)
-        kept = genes.copy()
-        mutants = mutate(stock, genes, random)
-        assert np.array_equal(genes, kept)
-        check_genes(stock, mutants)
-        for before, after in zip(genes, mutants, strict=True):
-            one, other = sheets_in(stock, before), sheets_in(stock, after)
-            left = one.copy()
-            for sheet in other:
-                if sheet in left:
-                    left.remove(sheet)
-            assert len(left) <= 1
-            assert abs(len(one) - len(other)) <= 1
-
-    @STOCKS
-    def test_mutation_reaches_every_kind_of_change(self, stock: Stock) -> None:
-        random = np.random.default_rng(0)
-        genes = np.repeat(stock.tidy(random_genes(stock, 50, random))[:1], 400, axis=0)
-        genes[:, 2] = 0
-        genes = stock.tidy(genes)
-        before = np.count_nonzero(genes[0, : stock.positions])
-        counts = np.count_nonzero(mutate(stock, genes, random)[:, : stock.positions], axis=1)
-        assert set(counts.tolist()) >= {before, before + 1}
-
-    def test_mutation_fills_an_empty_stack(self) -> None:
-        check_genes(BOTH, mutate(BOTH, np.zeros((20, 6), dtype=np.int64), np.random.default_rng(1)))
-
-    @STOCKS
-    @given(seed=st.integers(0, 2**32 - 1))
-    def test_crossover_shares_out_the_parents_sheets(self, stock: Stock, seed: int) -> None:
-        random = np.random.default_rng(seed)
-        parents = np.stack([random_genes(stock, 20, random), random_genes(stock, 20, random)])
-        children = StackCrossover(stock)._do(None, parents, random_state=random)
-        assert children.shape == parents.shape
-        for number in range(20):
-            both = sheets_in(stock, parents[0, number]) + sheets_in(stock, parents[1, number])
-            made = sheets_in(stock, children[0, number]) + sheets_in(stock, children[1, number])
-            assert sorted(made) == sorted(both)
-        check_genes(stock, children.reshape(-1, children.shape[2]), least_sheets=0)
-
-    @STOCKS
-    @given(seed=st.integers(0, 2**32 - 1))
-    def test_neighbours_are_valid(self, stock: Stock, seed: int) -> None:
-        for genes in random_genes(stock, 4, np.random.default_rng(seed)):
-            for moved in (neighbours(stock, genes), pair_neighbours(stock, genes, np.random.default_rng(seed))):
-                check_genes(stock, moved, least_sheets=0)
-
-    @given(seed=st.integers(0, 2**32 - 1))
-    def test_neighbours_of_gauges_are_all_of_them(self, seed: int) -> None:
-        (genes,) = random_genes(GAUGES, 1, np.random.default_rng(seed))
-        stack = [int(code) for code in genes[:3] if code]
-        expected = set(one_move_away(stack, GAUGES.choices, 3))
-        found = {tuple(code for code in row if code) for row in neighbours(GAUGES, genes)[:, :3].tolist()}
-        assert found - {tuple(stack)} == expected - {tuple(stack)}
-
-    @given(seed=st.integers(0, 2**32 - 1))
-    def test_pairs_of_gauges_are_all_of_them(self, seed: int) -> None:
-        (genes,) = random_genes(GAUGES, 1, np.random.default_rng(seed))
-        expected = set()
-        for one, other in itertools.combinations(range(3), 2):
-            for codes in itertools.product(range(GAUGES.choices + 1), repeat=2):
-                changed = genes[:3].tolist()
-                changed[one], changed[other] = codes
-                expected.add(tuple(code for code in changed if code))
-        moved = pair_neighbours(GAUGES, genes, np.random.default_rng(0))
-        assert {tuple(code for code in row if code) for row in moved[:, :3].tolist()} == expected
-
-    def test_pairs_are_drawn_where_there_are_many(self, monkeypatch: pytest.MonkeyPatch) -> None:
-        monkeypatch.setattr(explore, "MOST_PAIRS", 50)
-        (genes,) = random_genes(GAUGES, 1, np.random.default_rng(5))
-        drawn = [pair_neighbours(GAUGES, genes, np.random.default_rng(seed)) for seed in (1, 1, 2)]
-        assert [len(moved) for moved in drawn] == [50, 50, 50]
-        assert np.array_equal(drawn[0], drawn[1])
-        assert not np.array_equal(drawn[0], drawn[2])
-
-    def test_a_single_position(self) -> None:
-        stock = make("copper", "plate", max_sheets=1)
-        genes = np.array([1, 0])
-        assert pair_neighbours(stock, genes, np.random.default_rng(0)).shape == (0, 2)
-        found = neighbours(stock, genes)
-        check_genes(stock, found, least_sheets=0)
-        assert set(found[:, 0].tolist()) == set(range(stock.choices + 1))
-
-
-def one_move_away(stack: list[int], choices: int, longest: int) -> Iterable[tuple[int, ...]]:
-    for at in range(len(stack)):
-        yield tuple(stack[:at] + stack[at + 1 :])
-        for code in range(1, choices + 1):
-            yield (*stack[:at], code, *stack[at + 1 :])
-        for other in range(at + 1, len(stack)):
-            swapped = stack.copy()
-            swapped[at], swapped[other] = stack[other], stack[at]
-            yield tuple(swapped)
-    if len(stack) < longest:
-        for place in range(len(stack) + 1):
-            for code in range(1, choices + 1):
-                yield (*stack[:place], code, *stack[place:])

@@ -15,10 +15,11 @@ import small_problems
 from builders import LOOPS, MATERIALS, build_problem, film, material, ranged
 
 from stackopt import evaluate
+from stackopt.confirm import DENSITY
 from stackopt.errors import InputError
 from stackopt.front import Front
 from stackopt.model import spectral_lines
-from stackopt.phases import DENSITY, Search
+from stackopt.phases import Search
 from stackopt.physics.fields import REFERENCE_RULE
 from stackopt.problem import (
     CoaxialDipoles,
@@ -34,6 +35,7 @@ from stackopt.run import prove, search
 from stackopt.scout import scout
 from stackopt.status import Status
 from stackopt.units import format_frequency
+from stackopt.workers import Processes
 
 NEAR = MagneticNearField(0.05)
 MASK = Mask((1e3, 1e5), (14.0, 60.0), points_per_decade=2)
@@ -184,7 +186,8 @@ def dense_failures(task: Search) -> int:
 class TestSeedAndWorkers:
     def test_same_front_from_any_seed_and_number_of_workers(self) -> None:
         problem = make()
-        fronts = [Search(problem, seed, workers).run() for seed, workers in ((None, 1), (5, 2), (None, 4))]
+        with Processes(2) as two, Processes(4) as four:
+            fronts = [Search(problem, seed, workers).run() for seed, workers in ((None, None), (5, two), (None, four))]
         assert len({(front.rows, front.equals, front.statement) for front in fronts}) == 1
 
     def test_seed(self) -> None:

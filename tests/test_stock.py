@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from stackopt import evaluate
 from stackopt.compiled import MARGIN_SLACK_DB, compile_problem
-from stackopt.explore import random_genes
+from stackopt.moves import random_genes
 from stackopt.problem import MagneticNearField, Mask, Sheet
 from stackopt.stock import SCREENED_DB, Stock
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 
 import numpy as np
@@ -13,6 +15,8 @@ from stackopt.compiled import CompiledProblem, compile_problem
 from stackopt.problem import Problem
 from stackopt.proof import Prover
 from stackopt.readers import read_problem
+from stackopt.shares import Share, work_on
+from stackopt.workers import Processes, Serial, Workers
 
 Integers = NDArray[np.int64]
 
@@ -44,8 +48,22 @@ def empty_archive(compiled: CompiledProblem) -> Archive:
 def warmed(compiled: CompiledProblem) -> Prover:
     """A proof from nothing whose compiled code is loaded."""
     prover = Prover(compiled, empty_archive(compiled))
-    prover.warm()
+    warm(prover)
     return prover
+
+
+def warm(prover: Prover) -> None:
+    """Compile or load the descent, and make what it starts from."""
+    work_on(prover.tables, Share(prover.unopened, prover.archive.values, work=0))
+
+
+@contextmanager
+def awake(count: int) -> Iterator[Workers]:
+    """Workers that have proved something already: started, and their compiled code loaded."""
+    with Serial() if count == 1 else Processes(count) as workers:
+        compiled = compiled_reference("easy")
+        Prover(compiled, empty_archive(compiled)).run(workers)
+        yield workers
 
 
 def hypervolume_ratio(values: Integers, front: Integers) -> float:

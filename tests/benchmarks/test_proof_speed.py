@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from conditions import MASKS, compiled_reference, empty_archive, warmed
+from conditions import MASKS, awake, compiled_reference, empty_archive, warm, warmed
 from naive import enumerate_front
 from pytest_benchmark.fixture import BenchmarkFixture
 
@@ -13,11 +13,12 @@ from stackopt.proof import Prover
 from stackopt.stock import Stock
 
 
-@pytest.mark.parametrize("workers", [1, 2])
+@pytest.mark.parametrize("count", [1, 2])
 @pytest.mark.parametrize("mask", MASKS)
-def test_proof_from_nothing(benchmark: BenchmarkFixture, mask: str, workers: int) -> None:
+def test_proof_from_nothing(benchmark: BenchmarkFixture, mask: str, count: int) -> None:
     prover = warmed(compiled_reference(mask))
-    assert benchmark.pedantic(prover.run, (workers,), rounds=1)
+    with awake(count) as workers:
+        assert benchmark.pedantic(prover.run, (workers,), rounds=1)
     told(benchmark, prover)
 
 
@@ -29,8 +30,9 @@ def test_proof_of_what_exploring_finds(benchmark: BenchmarkFixture, mask: str) -
     known = empty_archive(compiled)
     known.add(explorer.archive.values, explorer.archive.codes[:, : compiled.rules.max_sheets])
     prover = Prover(compiled, known)
-    prover.warm()
-    assert benchmark.pedantic(prover.run, (2,), rounds=1)
+    warm(prover)
+    with awake(2) as workers:
+        assert benchmark.pedantic(prover.run, (workers,), rounds=1)
     told(benchmark, prover)
 
 
@@ -41,7 +43,7 @@ def test_plain_enumeration(benchmark: BenchmarkFixture, mask: str) -> None:
     enumerate_front(compiled_reference("easy"))  # compiles
     front, opened = benchmark.pedantic(enumerate_front, (compiled,), rounds=1)
     prover = warmed(compiled)
-    prover.run(2)
+    prover.run()
     assert np.array_equal(np.unique(front, axis=0), prover.archive.values)
     benchmark.extra_info["opened"] = int(opened)
     print(f"\n{benchmark.name}: {opened:,} prefixes opened; the proof opened {prover.tally.opened:,}")  # noqa: T201

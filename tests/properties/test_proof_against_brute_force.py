@@ -7,10 +7,10 @@ from __future__ import annotations
 
 import time
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import ExitStack
 from dataclasses import dataclass, replace
 from functools import cache
-from typing import Any
 
 import brute_force
 import numpy as np
@@ -26,8 +26,10 @@ from stackopt.compiled import CompiledProblem, compile_problem
 from stackopt.equals import equal_stacks
 from stackopt.explore import Explorer
 from stackopt.problem import CoaxialLoops, Mask, PlaneWave, Problem, Sheet, Stack, format_stack
-from stackopt.proof import Collector, Prover, Tally, count_stacks, mirror_holds, why_not_provable
+from stackopt.proof import Collector, Pending, Prover, Tally, count_stacks, why_not_provable
+from stackopt.shares import mirror_holds
 from stackopt.stock import Stock
+from stackopt.workers import Processes, Serial, Workers
 
 Integers = NDArray[np.int64]
 
@@ -71,6 +73,19 @@ def case(request: pytest.FixtureRequest) -> Case:
 @pytest.fixture(scope="module", params=DEEP)
 def deep(request: pytest.FixtureRequest) -> Case:
     return deep_case(request.param)
+
+
+@pytest.fixture
+def small_shares(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Shares so short that these problems, too, are split again and again."""
+    monkeypatch.setattr("stackopt.proof.WORK", 500)
+
+
+@pytest.fixture(scope="module")
+def workers() -> Iterator[dict[int, Workers]]:
+    """Workers by their number; two and four are processes."""
+    with ExitStack() as stack:
+        yield {1: Serial()} | {count: stack.enter_context(Processes(count)) for count in (2, 4)}
 
 
 def start(compiled: CompiledProblem, stacks: list[Stack] | None = None) -> Prover:
@@ -117,6 +132,13 @@ class TestAgainstEveryStack:
         assert rows_of(prover) == case.front
         check_members(case, prover)
 
+    @pytest.mark.usefixtures("small_shares")
+    def test_proved_in_small_shares(self, case: Case) -> None:
+        prover = start(case.compiled)
+        assert prover.run()
+        assert rows_of(prover) == case.front
+        check_members(case, prover)
+
     def test_limits_that_are_met_exactly(self, case: Case) -> None:
         """Limits at the sums of the last front member: what reaches them is not lost, what is beyond them is."""
         members = [stack for stack, vector in case.feasible.items() if case.front and vector == case.front[-1]]
@@ -141,7 +163,7 @@ class TestAgainstEveryStack:
         check_members(case, prover)
 
     def test_mirror_images(self, case: Case, monkeypatch: pytest.MonkeyPatch) -> None:
-        monkeypatch.setattr("stackopt.proof.mirror_holds", lambda _: False)
+        monkeypatch.setattr("stackopt.shares.mirror_holds", lambda _: False)
         prover = start(case.compiled)
         assert not prover.tables.mirror
         assert prover.run()
@@ -159,8 +181,8 @@ class TestAgainstEveryStack:
         assert set(found) == expected
 
     def test_further_demands(self, case: Case, monkeypatch: pytest.MonkeyPatch) -> None:
-        """A demand that follows no order at all; shares that have room for few candidates are tried again."""
-        monkeypatch.setattr("stackopt.proof.CANDIDATES", 2 if len(case.feasible) % 2 else 20_000)
+        """A demand that follows no order at all; shares that have room for few candidates end early."""
+        monkeypatch.setattr("stackopt.shares.CANDIDATES", 2 if len(case.feasible) % 2 else 20_000)
         monkeypatch.setattr("stackopt.demands.demands_of", lambda _: (demand,))
         kept = demand(case.compiled, evaluate.encode(case.compiled, list(case.feasible)))
         feasible = {stack: vector for (stack, vector), good in zip(case.feasible.items(), kept, strict=True) if good}
@@ -170,12 +192,13 @@ class TestAgainstEveryStack:
         assert rows_of(prover) == front
         check_members(replace(case, feasible=feasible), prover)
 
-    def test_alternatives(self, case: Case) -> None:
+    def test_alternatives(self, case: Case, monkeypatch: pytest.MonkeyPatch) -> None:
         """Every feasible stack that no member of the front beats by more than a factor in all objectives at once."""
         within = 0.15 if len(case.feasible) % 2 else 0.0
         values = np.array(case.front, dtype=np.int64).reshape(-1, len(case.problem.search.objectives))
         collector = Collector(case.compiled, values, within)
-        assert collector.run(2)
+        monkeypatch.setattr("stackopt.proof.WORK", 500 if len(case.feasible) % 3 else 1_000_000)
+        assert collector.run()
         assert not collector.overflowed
         stacks = evaluate.decode(case.compiled, collector.codes)
         expected = {
@@ -342,7 +365,7 @@ class TestMirrorImages:
         right = start(compiled)
         assert right.run()
         assert rows_of(right) == expected
-        monkeypatch.setattr("stackopt.proof.mirror_holds", lambda _: True)
+        monkeypatch.setattr("stackopt.shares.mirror_holds", lambda _: True)
         wrong = start(compiled)
         assert wrong.run()
         assert rows_of(wrong) == []
@@ -361,84 +384,73 @@ def with_mask_of(problem: Problem, text: str) -> Problem:
     return replace(problem, requirements=(replace(requirement, mask=mask),))
 
 
+@pytest.mark.usefixtures("small_shares")
 class TestInterrupted:
-    @pytest.mark.parametrize("workers", [1, 2, 4])
-    def test_workers_give_the_same_rows(self, deep: Case, workers: int) -> None:
+    @pytest.mark.parametrize("count", [1, 2, 4])
+    def test_workers_give_the_same_rows(self, deep: Case, workers: dict[int, Workers], count: int) -> None:
         prover = start(deep.compiled)
-        assert prover.run(workers)
+        assert prover.run(workers[count])
+        assert workers[count].running == 0
         assert rows_of(prover) == deep.front
+        check_members(deep, prover)
 
     def test_a_past_deadline_settles_nothing(self, deep: Case) -> None:
         prover = start(deep.compiled)
-        assert not prover.run(2, deadline=time.monotonic() - 1.0)
+        assert not prover.run(deadline=time.monotonic() - 1.0)
         assert not prover.complete
         assert prover.covered == 0.0
         assert len(prover.archive) == 0
-        assert prover.run(2)
+        assert prover.run()
         assert rows_of(prover) == deep.front
 
-    @pytest.mark.parametrize("workers", [1, 2])
-    def test_stopped_again_and_again(self, deep: Case, workers: int) -> None:
+    @pytest.mark.parametrize("count", [1, 2])
+    def test_stopped_again_and_again(self, deep: Case, workers: dict[int, Workers], count: int) -> None:
         """A watcher that raises ends the proof cleanly; what is done stays done, and the end is the same."""
         prover = start(deep.compiled)
         shares = []
         for _ in range(1000):
             shares.append(prover.covered)
             try:
-                prover.run(workers, watch=raise_after(1))
+                prover.run(workers[count], watch=raise_after(1 if prover.tally.opened < 9 else 40))
             except Stopped:
+                assert workers[count].running == 0
                 continue
             break
         assert prover.complete
-        assert shares == sorted(shares)
+        assert np.all(np.diff(shares) >= -1e-12)
         assert len(shares) >= 2
         assert rows_of(prover) == deep.front
         check_members(deep, prover)
 
-    def test_a_share_that_was_stopped_is_not_settled(self, deep: Case, monkeypatch: pytest.MonkeyPatch) -> None:
-        """As at a deadline: the descent returns at once and says that it is unfinished."""
-        prover = start(deep.compiled)
-        descend = prover.tables.descend
-
-        def stopped(prefix: tuple[int, ...], stop: NDArray[np.uint8], *rest: Any) -> tuple[Integers, bool]:
-            stop[0] = 1
-            return descend(prefix, stop, *rest)
-
-        with monkeypatch.context() as patched:
-            patched.setattr(prover.tables, "descend", stopped)
-            assert not prover.run()
-        assert not prover.complete
-        assert prover.run()
-        assert rows_of(prover) == deep.front
-
-    def test_continued_by_another_prover(self, deep: Case) -> None:
-        """As a resumed run does it: the shares that are done and the archive are all that is carried over."""
+    @pytest.mark.parametrize("count", [1, 2])
+    def test_continued_by_another_prover(self, deep: Case, workers: dict[int, Workers], count: int) -> None:
+        """As a resumed run does it: the prefixes not opened and the archive are all that is carried over."""
         calls: list[None] = []
-        start(deep.compiled).run(1, watch=lambda: calls.append(None))
+        start(deep.compiled).run(workers[count], watch=lambda: calls.append(None))
         first = start(deep.compiled)
         with pytest.raises(Stopped):
-            first.run(1, watch=raise_after(max(1, len(calls) // 2)))
-        assert 0.0 < first.covered < 1.0
+            first.run(workers[count], watch=raise_after(max(1, len(calls) // 2)))
+        assert 0.0 < first.covered <= 1.0  # rules may leave little to open
         second = Prover(deep.compiled, first.archive.copy(), first.tally)
-        second.done[:] = first.done
-        assert second.run(2)
+        second.go_on_from(first.unopened)
+        assert second.covered == pytest.approx(first.covered, abs=1e-12)
+        assert second.run(workers[2])
         assert rows_of(second) == deep.front
 
-    def test_room_that_grows_meanwhile(self, deep: Case, monkeypatch: pytest.MonkeyPatch) -> None:
-        """Another share may make room while one runs out of it; it is tried again all the same."""
-        monkeypatch.setattr("stackopt.proof.CANDIDATES", 1)
-        monkeypatch.setattr("stackopt.demands.demands_of", lambda _: (demand,))
+    def test_what_workers_have_is_saved(self, deep: Case) -> None:
+        """At any moment the prefixes not opened, with the archive, are enough to come to the same end."""
         prover = start(deep.compiled)
-        descend = prover.tables.descend
+        states = []
 
-        def crowded(*arguments: Any) -> tuple[Integers, bool]:
-            outcome = descend(*arguments)
-            prover.room += 1
-            return outcome
+        def watch() -> None:
+            states.append((prover.unopened, prover.archive.copy()))
 
-        monkeypatch.setattr(prover.tables, "descend", crowded)
-        assert prover.run()
-        assert prover.complete
+        prover.run(watch=watch)
+        for unopened, archive in states[:: max(1, len(states) // 7)]:
+            other = Prover(deep.compiled, archive)
+            other.go_on_from(unopened)
+            assert other.run()
+            assert rows_of(other) == deep.front
 
     def test_the_tally_grows(self, deep: Case) -> None:
         tally = Tally(opened=5, judged=7, seconds=1.0)
@@ -447,6 +459,34 @@ class TestInterrupted:
         assert tally.opened > 5
         assert tally.judged >= 7  # rules may leave nothing to judge
         assert tally.seconds > 1.0
+
+
+class TestPending:
+    def test_begins_with_everything(self) -> None:
+        pending = Pending(5, 3)
+        assert pending.prefixes.tolist() == [[0, 0, 0]]
+        assert pending.share == 1.0
+
+    def test_takes_from_the_top(self) -> None:
+        pending = Pending(5, 3)
+        (root,) = pending.take(4).tolist()
+        assert root == [0, 0, 0]
+        assert (len(pending), pending.share) == (0, 0.0)
+        pending.put(np.array([[n, 0, 0] for n in range(1, 6)]))
+        assert pending.share == pytest.approx(1.0)
+        assert pending.take(2).tolist() == [[4, 0, 0], [5, 0, 0]]
+        pending.put(np.array([[5, 1, 0]]))
+        assert pending.share == pytest.approx(3 / 5 + 1 / 25)
+        assert pending.take(2).tolist() == [[5, 1, 0]]
+        assert pending.prefixes.tolist() == [[1, 0, 0], [2, 0, 0], [3, 0, 0]]
+
+    def test_short_ones(self) -> None:
+        pending = Pending(5, 3)
+        pending.put(np.array([[1, 2, 0], [3, 0, 0]]))
+        assert pending.take_shorter(2).tolist() == [[0, 0, 0], [3, 0, 0]]
+        assert pending.prefixes.tolist() == [[1, 2, 0]]
+        assert pending.take_shorter(2).tolist() == []
+        assert pending.share == pytest.approx(1 / 25)
 
 
 class Stopped(Exception):  # noqa: N818 - the name says what happened

@@ -14,9 +14,9 @@ from typing import TYPE_CHECKING, Annotated, Any
 import typer
 import typer.core
 
-from stackopt import results_cli
+from stackopt import cli_endings, results_cli
 from stackopt.cli_bench import bench
-from stackopt.errors import Finding, InputError, StackoptError
+from stackopt.errors import Finding, InputError
 
 if TYPE_CHECKING:
     from stackopt.outputs.console import PlainConsole
@@ -28,36 +28,11 @@ PLOT_SUFFIXES = (".png", ".svg", ".pdf")
 
 
 class Commands(typer.core.TyperGroup):
-    """The group of all commands: the one place where exceptions become messages and exit codes."""
+    """The group of all commands, which end as `stackopt.cli_endings` says."""
 
     def invoke(self, ctx: Any) -> Any:
         """Run the command."""
-        try:
-            return super().invoke(ctx)
-        except StackoptError as error:
-            code = error.exit_code
-            typer.echo(str(error), err=True)
-        except KeyboardInterrupt:
-            code = 130
-            typer.echo("Interrupted.", err=True)
-        except BrokenPipeError:
-            # The reader of the output has seen enough (| head).
-            from stackopt.outputs.console import drop_output
-
-            code = 0
-            drop_output()
-        except Exception as error:
-            if isinstance(error, typer.Abort) or hasattr(error, "exit_code"):  # typer's own: wrong usage, exit
-                raise
-            if os.environ.get("STACKOPT_DEBUG") == "1":
-                raise
-            code = 2
-            typer.echo(
-                f"stackopt failed on a mistake of its own, {type(error).__name__}: {error}. Please report it with the "
-                "command and its files; with STACKOPT_DEBUG=1 in the environment it shows where.",
-                err=True,
-            )
-        raise typer.Exit(code)
+        return cli_endings.run(lambda: super(Commands, self).invoke(ctx))
 
 
 app = typer.Typer(
@@ -86,7 +61,10 @@ Within = Annotated[
     str | None,
     typer.Option(metavar="SHARE", help="Also list every stack that is within this share of the front, such as 5%."),
 ]
-Workers = Annotated[int | None, typer.Option(metavar="N", help="Processor cores for the proof; all if left out.")]
+Workers = Annotated[int | None, typer.Option(metavar="N", help="Processes to work with; one per core if left out.")]
+Cluster = Annotated[
+    str | None, typer.Option(metavar="ADDRESS", help="Work on a Dask scheduler's workers, such as tcp://host:8786.")
+]
 
 
 def _show_version(wanted: bool) -> None:
@@ -200,6 +178,7 @@ def search(
     ] = None,
     resume: Annotated[Path | None, typer.Option(metavar="RUN", help="Go on with an interrupted run.")] = None,
     within: Within = None,
+    cluster: Cluster = None,
     allow_outside: Outside = False,
 ) -> None:
     """Find the stacks that meet the mask and that none other beats.
@@ -207,7 +186,10 @@ def search(
     None other is as good in every objective and better in one. Explores first, then proves that no stack is missing,
     and checks the result on a denser grid. Ctrl-C stops with a checkpoint. Exit code 1: no stack meets the mask.
     """
-    _refuse(_wrong_hours(hours), _wrong_workers(workers), _wrong_seed(seed), *_wrong_start(problem, seed, out, resume))
+    _refuse(
+        _wrong_hours(hours), _wrong_workers(workers, cluster), _wrong_seed(seed),
+        *_wrong_start(problem, seed, out, resume),
+    )  # fmt: skip
     from stackopt.outputs.progress import TerminalProgress
     from stackopt.run import RunOptions, search_run
 
@@ -219,6 +201,7 @@ def search(
         resume=resume,
         allow_outside=allow_outside,
         within=_share(within),
+        cluster=cluster,
     )
     with TerminalProgress() as watcher:
         result = search_run(problem, options, watcher)
@@ -226,17 +209,20 @@ def search(
 
 
 @app.command()
-def prove(run: RunFolder, hours: Hours = None, workers: Workers = None, within: Within = None) -> None:
+def prove(
+    run: RunFolder, hours: Hours = None, workers: Workers = None, within: Within = None, cluster: Cluster = None
+) -> None:
     """Go on with the proof that the front of a run is complete.
 
     The front is all the stacks that meet the mask and that none other beats.
     """
-    _refuse(_wrong_hours(hours), _wrong_workers(workers), _wrong_run("RUN", run))
+    _refuse(_wrong_hours(hours), _wrong_workers(workers, cluster), _wrong_run("RUN", run))
     from stackopt.outputs.progress import TerminalProgress
     from stackopt.run import RunOptions, prove_run
 
+    options = RunOptions(hours=hours, workers=workers, within=_share(within), cluster=cluster)
     with TerminalProgress() as watcher:
-        result = prove_run(run, RunOptions(hours=hours, workers=workers, within=_share(within)), watcher)
+        result = prove_run(run, options, watcher)
     _show_result(result)
 
 
@@ -348,7 +334,9 @@ def _wrong_hours(hours: float | None) -> Finding | None:
     return Finding("", "--hours", f"found {hours:g}; write a time above 0 hours, such as 0.5")
 
 
-def _wrong_workers(workers: int | None) -> Finding | None:
+def _wrong_workers(workers: int | None, cluster: str | None) -> Finding | None:
+    if workers is not None and cluster is not None:
+        return Finding("", "--workers", "cannot be given with --cluster, which has workers of its own; leave one out")
     if workers is None or workers >= 1:
         return None
     return Finding("", "--workers", f"found {workers}; write 1 or more")
@@ -399,7 +387,9 @@ def _wrong_plot(plot: Path | None) -> Finding | None:
 
 def main() -> None:
     """Entry point of the command ``stackopt``."""
+    cli_endings.mend_streams()
     for stream in (sys.stdout, sys.stderr):
         if hasattr(stream, "reconfigure"):
             stream.reconfigure(errors="replace")  # a terminal of few characters shows "?" instead of failing
-    app()
+    with cli_endings.guarded():
+        app()

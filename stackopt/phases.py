@@ -201,7 +201,7 @@ class Search:
         rate = ""
 
         def watch() -> None:
-            watcher(self._status("exploring", None, rate, None))
+            watcher(self._status("exploring", None, rate or self.workers.words, None))
 
         while self.exploring and time.monotonic() < deadline:
             begun = time.monotonic()
@@ -254,7 +254,7 @@ class Search:
 
     def _rate(self, judged: int, seconds: float) -> str:
         words = f"{judged / max(seconds, 1e-9):,.0f} stacks/s"
-        return f"{words} on {self.workers.words}" if self.workers.words else words
+        return f"{words}, {self.workers.words}" if self.workers.words else words
 
     def _margins_so_far(self) -> dict[str, float]:
         """Largest margin for each requirement among the best stacks, or of the nearest one, dB."""

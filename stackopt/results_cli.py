@@ -1,4 +1,4 @@
-"""The commands that look at a finished run: ``page`` and ``pick``."""
+"""The commands that look at a run: ``status``, and of a finished one ``page`` and ``pick``."""
 
 from __future__ import annotations
 
@@ -23,8 +23,31 @@ RunFolder = Annotated[Path, typer.Argument(metavar="RUN", help="Folder of a run.
 
 def add_to(app: typer.Typer) -> None:
     """Add the commands to the application."""
+    app.command()(status)
     app.command()(page)
     app.command()(pick)
+
+
+def status(
+    run: RunFolder,
+    as_json: Annotated[bool, typer.Option("--json", help="One JSON object, for scripts.")] = False,
+) -> None:
+    """Tell how a run is doing, from any terminal.
+
+    Running, finished, interrupted or dead; how far it is, what it has found, how old that is, and the command to go on
+    with. Exit code 2: the folder is no run.
+    """
+    import json
+
+    from stackopt.outputs.console import make_console
+    from stackopt.outputs.run_status import show_state, state_object
+    from stackopt.watching import look
+
+    state = look(_folder(run))
+    if as_json:
+        typer.echo(json.dumps(state_object(state)))
+    else:
+        show_state(make_console(), state)
 
 
 def page(
@@ -93,6 +116,8 @@ def pick(
     index = _ask(finished, kept) if not chosen else _choose(front, kept, chosen[0], rank, parsed)
     sheet = make_build_sheet(front, index + 1, sizes["--panel"], sizes["--stock"])
     folder = out or run / f"pick-{index + 1}"
+    if out is None and folder.is_symlink():
+        raise InputError(Finding(str(folder), "", "is a link to another place; name the folder with --out"))
     _show(finished, index, write_build_sheet(sheet, folder, run.resolve().name), folder)
 
 

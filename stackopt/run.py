@@ -2,16 +2,13 @@
 
 from __future__ import annotations
 
-import hashlib
+import contextlib
 import json
 import os
-import platform
-import shutil
-import signal
+import shlex
 import sys
-import threading
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, replace
 from importlib.metadata import version
@@ -19,18 +16,34 @@ from pathlib import Path
 from typing import Any
 
 from stackopt.checkpoint import read_checkpoint, write_checkpoint
-from stackopt.errors import Finding, InputError, InterruptedRunError, RunError
+from stackopt.errors import Finding, InputError, InterruptedRunError, RunError, WorkersLostError
 from stackopt.front import Front
+from stackopt.lock import hold
 from stackopt.outputs.files import write_whole
 from stackopt.outputs.plots import write_curves, write_trade_off
 from stackopt.outputs.tables import write_alternatives, write_equals, write_front
 from stackopt.phases import Search
 from stackopt.problem import Problem
 from stackopt.readers import read_problem
+from stackopt.run_folder import (
+    INPUTS,
+    clean,
+    copy_inputs,
+    input_hash,
+    make_folder,
+    out_of_memory,
+    refuse_used,
+    resume_command,
+)
+from stackopt.run_record import make_record, result_record
+from stackopt.saved import why_not_usable
 from stackopt.status import Status, Watcher
+from stackopt.stopping import StopAsked, reason_of, signals
+from stackopt.untrusted import as_text
+from stackopt.watching import FAILED, RECORD, STOPPED, StatusFile, read_record
+from stackopt.workers import Processes, Serial, Workers
 
 CHECKPOINT_EVERY_S = 30.0
-_RECORD = "run.json"
 
 
 @dataclass(frozen=True)
@@ -42,7 +55,7 @@ class RunOptions:
     hours : float, optional
         Longest time; without it, until done.
     workers : int, optional
-        Threads for the proof; every core when left out.
+        Processes that explore and prove; one for every core when left out.
     seed : int, optional
         Instead of the problem's own.
     out : Path, optional
@@ -53,6 +66,8 @@ class RunOptions:
         Whether tables may be read from outside the problem's and the set's folders.
     within : float, optional
         List the alternatives within this factor (less one) of the front.
+    cluster : str, optional
+        Address of a scheduler whose workers explore and prove, instead of processes here.
     """
 
     hours: float | None = None
@@ -62,6 +77,7 @@ class RunOptions:
     resume: Path | None = None
     allow_outside: bool = False
     within: float | None = None
+    cluster: str | None = None
 
 
 @dataclass(frozen=True)
@@ -87,7 +103,8 @@ def search(
     seed : int, optional
         Instead of the problem's own.
     workers : int
-        Threads for the proof.
+        Processes that explore and prove; 1 is this process itself. A script that asks for more must be importable
+        without side effects (``if __name__ == "__main__":``).
     hours : float, optional
         Longest time.
     watcher : callable
@@ -98,7 +115,9 @@ def search(
     Front
         Complete where the problem's gauges are discrete and time allowed.
     """
-    return Search(problem, seed, workers).run(watcher, _deadline(hours))
+    deadline = _deadline(hours)
+    with _open_workers(workers) as crew:
+        return Search(problem, seed, crew).run(watcher, deadline)
 
 
 def prove(problem: Problem, front: Front | None = None, workers: int = 1, hours: float | None = None) -> Front:
@@ -109,11 +128,13 @@ def prove(problem: Problem, front: Front | None = None, workers: int = 1, hours:
     InputError
         When an objective or a thickness range cannot be proved.
     """
-    task = Search(problem, workers=workers)
-    if task.obstacle is not None:
-        raise InputError(f"this front cannot be proved: {task.obstacle}")
-    task.start_from([row.stack for row in front.rows] if front else [])
-    return task.run(deadline=_deadline(hours))
+    deadline = _deadline(hours)
+    with _open_workers(workers) as crew:
+        task = Search(problem, workers=crew)
+        if task.obstacle is not None:
+            raise InputError(f"this front cannot be proved: {task.obstacle}")
+        task.start_from([row.stack for row in front.rows] if front else [])
+        return task.run(deadline=deadline)
 
 
 def search_run(problem_path: Path | None, options: RunOptions, watcher: Watcher) -> RunResult:
@@ -126,15 +147,19 @@ def search_run(problem_path: Path | None, options: RunOptions, watcher: Watcher)
     InterruptedRunError
         When the user stopped it; a checkpoint is written.
     """
+    deadline = _deadline(options.hours)
     if options.resume is not None:
-        return _resume(options.resume, options, watcher, proof_only=False)
+        return _resume(options.resume, options, watcher, deadline, proof_only=False)
     assert problem_path is not None
     problem = read_problem(problem_path, allow_outside=options.allow_outside)
-    folder = _new_folder(problem, options.out)
-    _copy_inputs(problem, folder)
-    watcher(Status("compiling"))
-    task = Search(problem, options.seed, _workers(options))
-    return _Run(folder, problem, task, watcher).go(options)
+    folder = make_folder(problem, options.out)
+    with _at_work(folder):
+        refuse_used(folder)
+        problem = _read_copies(problem, folder)
+        watcher(Status("compiling"))
+        with _open_workers(_workers(options), options.cluster) as crew:
+            task = Search(problem, options.seed, crew)
+            return _Run(folder, problem, task, watcher).go(options, deadline)
 
 
 def prove_run(folder: Path, options: RunOptions, watcher: Watcher) -> RunResult:
@@ -145,218 +170,230 @@ def prove_run(folder: Path, options: RunOptions, watcher: Watcher) -> RunResult:
     InputError
         When the run cannot be read, or its front cannot be proved.
     """
-    return _resume(folder, options, watcher, proof_only=True)
+    return _resume(folder, options, watcher, _deadline(options.hours), proof_only=True)
 
 
-def _resume(folder: Path, options: RunOptions, watcher: Watcher, proof_only: bool) -> RunResult:
-    record = read_record(folder)
-    problem = read_problem(folder / record["problem"], allow_outside=True)
+def _resume(folder: Path, options: RunOptions, watcher: Watcher, deadline: float, proof_only: bool) -> RunResult:
+    read_record(folder)  # a folder that is no run gets no lock
+    with _at_work(folder):
+        record = read_record(folder)
+        problem = _unchanged_problem(folder, record)
+        arrays, text, warnings = read_checkpoint(folder)
+        for warning in warnings:
+            _say(f"warning: {warning}")
+        _refuse_unusable(folder, record, problem, arrays, text)
+        watcher(Status("compiling"))
+        with _open_workers(_workers(options), options.cluster) as crew:
+            task = Search(problem, record["seed"], crew)
+            if proof_only and task.obstacle is not None:
+                raise InputError(f"this front cannot be proved: {task.obstacle}")
+            _restore(folder, task, arrays, text)
+            task.exploring = task.exploring and not proof_only
+            finished = record.get("finished") is True
+            return _Run(folder, problem, task, watcher, was_finished=finished).go(options, deadline)
+
+
+def _open_workers(count: int, cluster: str | None = None) -> Workers:
+    """Return those who explore and prove: this process, others beside it, or a cluster."""
+    if cluster is not None:
+        from stackopt.cluster import Cluster
+
+        return Cluster(cluster)
+    return Serial() if count == 1 else Processes(count, ("stackopt.explore", "stackopt.shares", "stackopt.descent"))
+
+
+@contextmanager
+def _at_work(folder: Path) -> Iterator[None]:
+    """Hold the run folder, without what a kill left in it; memory that runs out becomes a message."""
+    with hold(folder, _say):
+        clean(folder)
+        try:
+            yield
+        except MemoryError as error:
+            raise RunError(out_of_memory(folder, error)) from None
+
+
+def _read_copies(problem: Problem, folder: Path) -> Problem:
+    """Copy the inputs and read the copies: what is searched is what the run keeps, whatever becomes of the originals.
+
+    Raises
+    ------
+    RunError
+        When a file cannot be copied, or the copies do not read like the originals.
+    """
+    path = copy_inputs(problem, folder)
+    try:
+        return read_problem(path, fence=folder / INPUTS)
+    except InputError as error:
+        why = "the copies of the inputs do not read like the originals; put the files into one folder"
+        raise RunError([*error.findings, Finding(str(folder), "", why)]) from None
+
+
+def _unchanged_problem(folder: Path, record: dict[str, Any]) -> Problem:
+    problem = read_problem(folder / record["problem"], fence=folder / INPUTS)
     if input_hash(problem) != record["input_sha256"]:
         raise RunError(Finding(str(folder), "inputs", "were changed since the run began; start a new search"))
     if record["stackopt"] != version("stackopt"):
-        raise RunError(
-            Finding(
-                str(folder),
-                _RECORD,
-                f"was written by stackopt {record['stackopt']}, this is {version('stackopt')}; start a new search",
-            )
-        )
-    arrays, text, warnings = read_checkpoint(folder)
-    for warning in warnings:
-        print(f"warning: {warning}", file=sys.stderr)  # noqa: T201 - the run has no other way to say it
-    watcher(Status("compiling"))
-    task = Search(problem, record["seed"], _workers(options))
-    if proof_only and task.obstacle is not None:
-        raise InputError(f"this front cannot be proved: {task.obstacle}")
-    task.restore(arrays, text)
-    task.exploring = task.exploring and not proof_only
-    return _Run(folder, problem, task, watcher).go(options)
+        found = as_text(record["stackopt"], 40)
+        message = f"was written by stackopt {found}, this is {version('stackopt')}; start a new search"
+        raise RunError(Finding(str(folder), RECORD, message))
+    return problem
+
+
+def _refuse_unusable(
+    folder: Path, record: dict[str, Any], problem: Problem, arrays: dict[str, Any], text: dict[str, Any]
+) -> None:
+    """Refuse a checkpoint that is whole, but not one of this run or not one that this program writes."""
+    if text.get("input_sha256") != record["input_sha256"]:
+        raise RunError(Finding(str(folder), "", "its checkpoint belongs to other inputs; start a new search"))
+    wrong = why_not_usable(arrays, text, problem)
+    if wrong is not None:
+        raise RunError(Finding(str(folder), "", f"its checkpoint cannot be used: {wrong}; start a new search"))
+
+
+def _restore(folder: Path, task: Search, arrays: dict[str, Any], text: dict[str, Any]) -> None:
+    """Restore a search; what still does not fit after `stackopt.saved` has looked is refused too."""
+    try:
+        task.restore(arrays, text)
+    except (LookupError, TypeError, ValueError, ArithmeticError, AttributeError) as error:
+        reason = f"its checkpoint cannot be used ({type(error).__name__}: {error}); start a new search"
+        raise RunError(Finding(str(folder), "", reason)) from error
+
+
+def _say(text: str) -> None:
+    """Write a note or a warning; that nobody can read it stops nothing."""
+    with contextlib.suppress(OSError, ValueError):
+        print(text, file=sys.stderr, flush=True)  # noqa: T201 - the run has no other way to say it
 
 
 class _Run:
-    """One process at work in a run folder."""
+    """One process at work in a run folder that it holds."""
 
-    def __init__(self, folder: Path, problem: Problem, task: Search, watcher: Watcher) -> None:
+    def __init__(
+        self, folder: Path, problem: Problem, task: Search, watcher: Watcher, was_finished: bool = False
+    ) -> None:
         self.folder, self.problem, self.task, self.watcher = folder, problem, task, watcher
+        self.was_finished = was_finished
+        self.inputs_sha256 = input_hash(problem)
+        self.status_file = StatusFile(folder)
         self.saved_at = -float("inf")
-        self.started = time.monotonic()
+        self.shown_values: Any = None  # the archive's when front.csv was last written
 
-    def go(self, options: RunOptions) -> RunResult:
-        self._write_record(None)
-        self._save()
-        with _signals() as stopped:
+    def go(self, options: RunOptions, deadline: float) -> RunResult:
+        try:
+            result = self._go(options, deadline)
+        except InterruptedRunError:
+            self.status_file.close(STOPPED)
+            raise
+        except BaseException as error:
+            self.status_file.close(FAILED, reason_of(error))
+            raise
+        self.status_file.remove()
+        return result
+
+    def _go(self, options: RunOptions, deadline: float) -> RunResult:
+        self._save()  # before the record: what has one can be resumed
+        if not self.was_finished:  # the front of a finished run stays good until there is a better one
+            self._write_record(None)
+        with signals() as stopped:
 
             def watch(status: Status) -> None:
-                self.watcher(status)
+                self._tell(status)
                 if stopped.is_set():
-                    raise _Stop
+                    raise StopAsked
 
             try:
-                deadline = _deadline(options.hours)
                 front = self.task.run(watch, deadline, self._save_now_and_then)
                 if options.within is not None:
                     front = self.task.alternatives(front, options.within, watch, deadline)
-            except _Stop:
-                self._save()
-                raise InterruptedRunError(
-                    f"Stopped; a checkpoint is written. Go on with: stackopt search --resume {self.folder}"
-                ) from None
+            except StopAsked:
+                self._save_with_front()
+                raise InterruptedRunError(f"Stopped; {self._saved_words()}") from None
+            except WorkersLostError as error:
+                self._save_with_front()
+                raise WorkersLostError(f"{error}; {self._saved_words()}") from None
             self._save()
-        self.watcher(Status("writing", front_size=len(front)))
+        self._tell(Status("writing", front_size=len(front)))
         if self.task.prover is not None and not self.task.prover.complete:
-            front = replace(front, statement=f"{front.statement} Go on with: stackopt prove {self.folder}")
-        self._write_results(front)
+            more = f"Go on with: stackopt prove {shlex.quote(str(self.folder))}"
+            front = replace(front, statement=f"{front.statement} {more}")
+        self._write(lambda: self._write_results(front))
         return RunResult(front, self.folder)
+
+    def _write(self, write: Callable[[], None]) -> None:
+        """Write results; where they cannot be written, say that the search itself is saved."""
+        try:
+            write()
+        except InputError as error:
+            raise RunError([*error.findings, self._what_is_left()]) from None
+        except OSError as error:
+            reason = Finding(str(error.filename or self.folder), "", f"cannot be written: {error.strerror or error}")
+            raise RunError([reason, self._what_is_left()]) from None
+
+    def _what_is_left(self) -> Finding:
+        if not self.folder.is_dir():
+            return Finding(str(self.folder), "", "is gone: it was removed or renamed during the run; start again")
+        message = f"the search itself is saved; write its results later with: {resume_command(self.folder)}"
+        return Finding(str(self.folder), "", message)
+
+    def _tell(self, status: Status) -> None:
+        self.watcher(status)
+        self.status_file(status)
 
     def _save_now_and_then(self) -> None:
         if time.monotonic() - self.saved_at >= CHECKPOINT_EVERY_S:
-            self._save()
+            self._save_with_front()
+
+    def _save_with_front(self) -> None:
+        """Save, and write the stacks found so far that hold: somebody may need one before the end."""
+        self._save()
+        values = self.task.archive.values
+        if self.was_finished or values is self.shown_values:
+            return
+        front = self.task.front_so_far()
+        if len(front):
+            self._write(lambda: write_front(front, self.folder / "front.csv"))
+        self.shown_values = values
+
+    def _saved_words(self) -> str:
+        return f"a checkpoint is written. Go on with: {resume_command(self.folder)}"
 
     def _save(self) -> None:
         arrays, text = self.task.state()
-        write_checkpoint(self.folder, arrays, text)
+        try:
+            write_checkpoint(self.folder, arrays, {**text, "input_sha256": self.inputs_sha256})
+        except RunError as error:
+            if not self.folder.is_dir():
+                raise
+            go_on = f"once it can be written again, go on with: {resume_command(self.folder)}"
+            raise RunError([*error.findings, Finding(str(self.folder), "", go_on)]) from None
         self.saved_at = time.monotonic()
 
     def _write_results(self, front: Front) -> None:
-        write_front(front, self.folder / "front.csv")
+        """Write the tables, then the record, which says that they belong together, then what is drawn from them."""
+        self._write_record(None)
+        table, alternatives = self.folder / "front.csv", self.folder / "alternatives.csv"
+        before = table.read_bytes() if table.is_file() else None
+        write_front(front, table)
         write_equals(front, self.folder / "front_equals.csv")
         if front.alternatives is not None:
-            write_alternatives(front, self.folder / "alternatives.csv")
+            write_alternatives(front, alternatives)
+        elif table.read_bytes() != before:  # they were those of another front
+            alternatives.unlink(missing_ok=True)
+        self._write_record(front)
         if len(front):
             write_trade_off(front, self.folder / "trade_off.png")
             write_curves(front, self.folder / "curves.png")
-        self._write_record(front)
         from stackopt.outputs.page import write_page  # a second to load, needed only here
 
         write_page(front, self.folder / "trade_off.html", self.folder.resolve().name)
 
     def _write_record(self, front: Front | None) -> None:
-        task = self.task
-        packages = ("numpy", "scipy", "numba", "pymoo", "pandas")
-        record: dict[str, Any] = {
-            "stackopt": version("stackopt"),
-            "problem": str(_input_path(self.problem, Path(self.problem.files[0]))),
-            "title": self.problem.title,
-            "input_sha256": input_hash(self.problem),
-            "seed": task.seed,
-            "versions": {"python": platform.python_version()} | {name: version(name) for name in packages},
-            "machine": {"processor": platform.machine(), "cores": os.cpu_count(), "workers": task.workers},
-            "objectives": list(self.problem.search.objectives),
-            "assume": self.problem.search.assume,
-            "driven": [requirement.name for requirement in self.problem.requirements if requirement.drive],
-            "finished": front is not None,
-            "complete": front is not None and front.complete,
-        }
+        record = make_record(self.problem, self.task, self.inputs_sha256)
         if front is not None:
-            record |= {
-                "statement": front.statement,
-                "front": len(front),
-                "equal_stacks": len(front.equals),
-                "rounds": task.round + 1,
-                "added_frequencies_hz": task.extra_hz,
-                "quadrature": [
-                    {"requirement": requirement.name, "lines": chosen.lines, "error_db": chosen.error_db}
-                    for requirement, chosen in zip(
-                        self.problem.requirements, task.compiled.rows.quadrature, strict=True
-                    )
-                ],
-                "seconds": {name: round(value, 3) for name, value in task.seconds.items()},
-                "explored": {"stacks_judged": task.explorer.computed, "epochs": task.explorer.epoch},
-                "proof": task.proof_record(),
-            }
+            record |= result_record(self.problem, self.task, front, self.status_file.last.margins)
         text = json.dumps(record, indent=2, ensure_ascii=False) + "\n"
-        write_whole(self.folder / _RECORD, lambda part: _write_text(part, text))
-
-
-class _Stop(Exception):  # noqa: N818 - a signal, not an error
-    """Raised out of a watcher to end the phases at a safe place."""
-
-
-@contextmanager
-def _signals() -> Iterator[threading.Event]:
-    """Turn the first SIGINT or SIGTERM into an event; a second one stops at once."""
-    stopped = threading.Event()
-    if threading.current_thread() is not threading.main_thread():
-        yield stopped
-        return
-
-    def note(number: int, frame: object) -> None:
-        if stopped.is_set():
-            raise KeyboardInterrupt
-        stopped.set()
-
-    before = {number: signal.signal(number, note) for number in (signal.SIGINT, signal.SIGTERM)}
-    try:
-        yield stopped
-    finally:
-        for number, handler in before.items():
-            signal.signal(number, handler)
-
-
-def read_record(folder: Path) -> dict[str, Any]:
-    """Read a run's run.json.
-
-    Raises
-    ------
-    RunError
-        When the folder is no run, or its record cannot be read.
-    """
-    path = folder / _RECORD
-    try:
-        record = json.loads(path.read_text(encoding="utf-8"))
-    except FileNotFoundError:
-        raise RunError(Finding(str(folder), "", f"is not a run folder: it has no {_RECORD}")) from None
-    except (OSError, ValueError) as error:
-        raise RunError(Finding(str(path), "", f"cannot be read: {error}; start a new search")) from None
-    needed = {"stackopt", "problem", "input_sha256", "seed"}
-    if not isinstance(record, dict) or not needed <= record.keys():
-        raise RunError(Finding(str(path), "", "is not the record of a run; start a new search"))
-    return record
-
-
-def input_hash(problem: Problem) -> str:
-    """SHA-256 over the content of every file that a problem was read from, in the order of their names."""
-    digest = hashlib.sha256()
-    for path in sorted(problem.files, key=lambda name: _input_path(problem, Path(name)).as_posix()):
-        digest.update(Path(path).name.encode() + b"\0" + Path(path).read_bytes() + b"\0")
-    return digest.hexdigest()
-
-
-def _new_folder(problem: Problem, out: Path | None) -> Path:
-    try:
-        if out is not None:
-            out.mkdir(parents=True, exist_ok=True)
-            return out
-        results = Path("results")
-        results.mkdir(exist_ok=True)
-        for number in range(1, 1_000_000):
-            folder = results / f"{problem.name}-{number}"
-            try:
-                folder.mkdir()
-            except FileExistsError:
-                continue
-            return folder
-    except OSError as error:
-        raise RunError(
-            Finding(str(out or "results"), "", f"cannot be made: {error.strerror}; name another folder with --out")
-        ) from None
-    raise RunError(f"results holds a million runs of {problem.name}; clear it, or name a folder with --out")
-
-
-def _copy_inputs(problem: Problem, folder: Path) -> None:
-    """Copy the input files, keeping where they lie relative to one another: the copies read like the originals."""
-    try:
-        for name in problem.files:
-            target = folder / _input_path(problem, Path(name))
-            target.parent.mkdir(parents=True, exist_ok=True)
-            shutil.copyfile(name, target)
-    except OSError as error:
-        raise RunError(Finding(str(folder), "inputs", f"cannot be copied: {error.strerror}")) from None
-
-
-def _input_path(problem: Problem, path: Path) -> Path:
-    base = Path(os.path.commonpath([Path(name).parent for name in problem.files]))
-    return Path("inputs") / path.relative_to(base)
+        write_whole(self.folder / RECORD, lambda part: _write_text(part, text))
 
 
 def _write_text(path: Path, text: str) -> None:
@@ -368,4 +405,11 @@ def _workers(options: RunOptions) -> int:
 
 
 def _deadline(hours: float | None) -> float:
+    """When to stop, on the clock that the search looks at.
+
+    That clock is not the one on the wall: setting the time, or the change to summer time, changes nothing. On Linux
+    and macOS it also stands still while the machine sleeps, so that a laptop whose lid was closed goes on when it
+    wakes and works for as long as it was asked to, instead of ending at once with next to nothing done. On Windows it
+    goes on during sleep.
+    """
     return float("inf") if hours is None else time.monotonic() + 3600.0 * hours

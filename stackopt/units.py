@@ -51,6 +51,8 @@ _UNIT = re.compile(r"(?:[^\W\d_]+|°)(?:(?:\^|\*\*)-?\d|[²³])?(?:\s*[ */·]\s*
 _SHORT = reprlib.Repr()
 _SHORT.maxstring = _SHORT.maxother = 60
 _MIL = re.compile(r"\bmil\b")
+_NAMES = {"Hz": ("hertz",), "rad": ("radian", "degree", "turn", "grade", "arcminute", "arcsecond")}
+"""Ends of the names, which may have prefixes, that the unit library gives to frequencies and angles."""
 _NUMBER = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?)\s*(.*?)\s*$")
 
 
@@ -116,17 +118,39 @@ def parse_quantity(text: object, kind: str) -> float:
         raise ValueError(f"found {show(text)}, which has no unit; write {unit} or a multiple of it, such as {example}")
     if kind in ("level", "ratio"):
         if given != unit:
-            raise ValueError(f"found {show(text)}; a {kind} is given in {unit}, such as {example}")
-        return number / 100.0 if kind == "ratio" else number
+            raise ValueError(f"found {show(text)}; {_a(kind)} is given in {unit}, such as {example}")
+        return (number / 100.0 if kind == "ratio" else number) + 0.0
     return _to_si(number, given, kind, text)
+
+
+def _a(kind: str) -> str:
+    return f"{'an' if kind[0] in 'aeiou' else 'a'} {kind}"
 
 
 @functools.cache
 def _factor(given: str, unit: str) -> float:
+    import pint
+
     if _UNIT.fullmatch(given) is None:
         raise ValueError(given)
     name = _MIL.sub("thou", given)  # the library's own mil is an angle
-    return float(_registry().Quantity(1.0, name).to(unit).magnitude)
+    one, two = (_registry().Quantity(number, name) for number in (1.0, 2.0))
+    factor = float(one.to(unit).magnitude)
+    is_multiple = math.isclose(float(two.to(unit).magnitude), 2.0 * factor)
+    if not is_multiple or not _means([str(item) for item, _ in one.unit_items()], unit):
+        raise pint.DimensionalityError(given, unit)
+    return factor
+
+
+def _means(names: list[str], unit: str) -> bool:
+    """Tell whether units that convert also mean the same.
+
+    The library counts angles as plain numbers, so that it takes rad/s and revolutions per minute for Hz, a factor of
+    2 pi apart, and a percentage for an angle. (Levels such as dBm convert too, but are no multiples of a unit.)
+    """
+    if unit in _NAMES:
+        return len(names) == 1 and names[0].endswith(_NAMES[unit])
+    return all(_registry().get_dimensionality(name) for name in names)
 
 
 def _to_si(number: float, given: str, kind: str, text: str) -> float:
@@ -137,7 +161,7 @@ def _to_si(number: float, given: str, kind: str, text: str) -> float:
         value = number * _factor(given, unit)
     except pint.DimensionalityError:
         raise ValueError(
-            f"found {show(text)}, which is not a {kind}; write {unit} or a multiple of it, such as {example}"
+            f"found {show(text)}, which is not {_a(kind)}; write {unit} or a multiple of it, such as {example}"
         ) from None
     except Exception:  # the unit library raises many kinds for text that is no unit
         raise ValueError(
@@ -146,7 +170,7 @@ def _to_si(number: float, given: str, kind: str, text: str) -> float:
         ) from None
     if not math.isfinite(value):
         raise ValueError(f"found {show(text)}, which is too large; write the {kind} such as {example}")
-    return float(f"{value:.15g}")  # "105 um" and "0.105 mm" are the same number
+    return float(f"{value:.15g}") + 0.0  # "105 um" and "0.105 mm" are the same number, and so are -0 and 0
 
 
 def format_thickness(thickness_m: float) -> str:

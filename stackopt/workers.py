@@ -7,6 +7,7 @@ every worker once.
 
 from __future__ import annotations
 
+import importlib
 import multiprocessing
 import os
 import pickle
@@ -175,11 +176,13 @@ class Processes(Workers):
     Parameters
     ----------
     count : int
-        Number of processes; each is started when there is something to do for it.
+        Number of processes.
+    modules : sequence of str
+        What they import at once, while the caller prepares what they are to do.
     """
 
-    def __init__(self, count: int) -> None:
-        self._count = count
+    def __init__(self, count: int, modules: Sequence[str] = ()) -> None:
+        self._count, self._modules = count, tuple(modules)
         self._folder = Path(tempfile.mkdtemp(prefix="stackopt-"))  # readable by this user only
         self._published = 0
         self._running: dict[Future[Any], _Call] = {}
@@ -243,8 +246,10 @@ class Processes(Workers):
         # Processes hold one end of a pipe; they leave when the other end closes, which even a killed process does.
         self._held, self._leash = context.Pipe(duplex=False)
         self._executor = ProcessPoolExecutor(
-            self._count, context, initializer=_begin, initargs=(self._held, str(self._folder))
+            self._count, context, initializer=_begin, initargs=(self._held, str(self._folder), self._modules)
         )
+        for _ in range(self._count):  # a process is started for each call that finds none free
+            self._executor.submit(_awake)
 
     def _end(self) -> None:
         self._executor.shutdown(wait=False, cancel_futures=True)
@@ -268,11 +273,18 @@ class Processes(Workers):
 _tables: dict[str, Any] = {}  # of a worker process, by the name of their file
 
 
-def _begin(held: Connection, folder: str) -> None:
+def _begin(held: Connection, folder: str, modules: tuple[str, ...]) -> None:
     """Prepare a worker process: signals are its parent's business, and it never outlives that."""
-    for number in (signal.SIGINT, signal.SIGTERM):
-        signal.signal(number, signal.SIG_IGN)
+    for name in ("SIGINT", "SIGTERM", "SIGHUP"):  # as far as the system has them
+        if number := getattr(signal, name, None):
+            signal.signal(number, signal.SIG_IGN)
     threading.Thread(target=_leave_with_parent, args=(held, folder), daemon=True).start()
+    for name in modules:
+        importlib.import_module(name)
+
+
+def _awake() -> None:
+    """Do nothing, once the process is there."""
 
 
 def _leave_with_parent(held: Connection, folder: str) -> None:

@@ -20,7 +20,8 @@ ROOT = Path(inspect.getfile(stackopt)).parent
 
 ROWS = (
     ("errors", "units", "status", "blocks", "archive"),
-    ("physics", "physics.*", "checkpoint"),
+    ("untrusted", "stopping"),
+    ("physics", "physics.*", "checkpoint", "lock", "watching", "workers"),
     ("problem",),
     ("model", "deviation", "front"),
     ("drive_point", "inside", "rayleigh"),
@@ -31,13 +32,14 @@ ROWS = (
     ("evaluate",),
     ("cases", "tolerance", "band", "sensitivity"),
     ("demands",),
-    ("stock", "scout", "equals", "prediction", "choice", "explain", "build"),
-    ("explore", "proof"),
+    ("cluster", "shares", "stock", "scout", "equals", "prediction", "choice", "explain", "build"),
+    ("explore", "moves", "proof", "confirm"),
     ("phases",),
     ("bench", "bench.*"),
     ("outputs", "outputs.*"),
-    ("run", "runs"),
-    ("cli", "cli_bench", "results_cli"),
+    ("saved", "run_folder"),
+    ("run", "run_record", "runs"),
+    ("cli", "cli_bench", "cli_endings", "results_cli"),
 )
 """A module imports from rows above its own, or from its own row."""
 
@@ -49,6 +51,7 @@ ONLY_IMPORTERS = {
     "jinja2": ("outputs.templating",),
     "numba": ("lanes", "kernel", "descent", "equals"),
     "llvmlite": ("lanes",),
+    "distributed": ("cluster",),
     "typer": ("cli", "*_cli", "cli_*"),
     "pydantic": ("readers.*",),
     "skrf": ("readers.touchstone",),

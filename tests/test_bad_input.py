@@ -544,7 +544,7 @@ def test_files_that_are_no_files(tmp_path: Path, read: Any) -> None:
 
 def test_huge_files_are_refused_unread(tmp_path: Path) -> None:
     os.truncate(write(tmp_path), 60_000_000)
-    with pytest.raises(InputError, match="has 60 MB; files up to 50 MB are read"):
+    with pytest.raises(InputError, match="has 60 MB; files up to 10 MB are read"):
         read_problem(tmp_path / "problem.toml")
 
 

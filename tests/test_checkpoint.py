@@ -6,17 +6,20 @@ import io
 import json
 import os
 import pickle
+import subprocess
+import sys
 from collections.abc import Callable
 from hashlib import sha256
 from pathlib import Path
 from typing import Any
+from zipfile import ZipFile
 
 import numpy as np
 import pytest
 from numpy.typing import NDArray
 
 from stackopt import checkpoint
-from stackopt.checkpoint import FORMAT, read_checkpoint, write_checkpoint
+from stackopt.checkpoint import FORMAT, clean_parts, read_checkpoint, write_checkpoint
 from stackopt.errors import RunError
 
 ARRAYS: dict[str, NDArray[Any]] = {
@@ -165,6 +168,107 @@ class TestDamaged:
             read_checkpoint(tmp_path)
 
 
+def with_checksum(path: Path, content: bytes) -> None:
+    path.write_bytes(content + sha256(content).digest())
+
+
+class TestHandmade:
+    """A right checksum, and a content that this program never wrote."""
+
+    @pytest.mark.parametrize(
+        "text", [b"", b"{", b"[]", b"7", b"\xff", b'{"format": "2"}', b'{"format": null}', b"{}", b"[" * 100_000]
+    )
+    def test_text(self, tmp_path: Path, text: bytes) -> None:
+        write_numbers(tmp_path, 1)
+        content = io.BytesIO()
+        np.savez(content, number=np.array([2]), text=np.frombuffer(text, dtype=np.uint8))
+        with_checksum(tmp_path / "checkpoint-000002.npz", content.getvalue())
+        number, (warning,) = number_read(tmp_path)
+        assert number == 1
+        assert warning.startswith("checkpoint-000002.npz cannot be used (")
+
+    def test_no_text(self, tmp_path: Path) -> None:
+        write_numbers(tmp_path, 1)
+        content = io.BytesIO()
+        np.savez(content, number=np.array([2]))
+        with_checksum(tmp_path / "checkpoint-000002.npz", content.getvalue())
+        assert number_read(tmp_path)[0] == 1
+
+    def test_no_archive(self, tmp_path: Path) -> None:
+        write_numbers(tmp_path, 1)
+        with_checksum(tmp_path / "checkpoint-000002.npz", b"no archive")
+        assert number_read(tmp_path)[0] == 1
+
+    def test_claims_more_than_any_memory(self, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+        write_numbers(tmp_path, 1)
+        monkeypatch.setattr(checkpoint, "MAX_BYTES", 10_000_000)
+        content = io.BytesIO()
+        text = np.frombuffer(json.dumps({"format": FORMAT}).encode(), dtype=np.uint8)
+        np.savez_compressed(content, number=np.zeros(2_000_000), text=text)
+        assert len(content.getvalue()) < 100_000
+        with_checksum(tmp_path / "checkpoint-000002.npz", content.getvalue())
+        number, (warning,) = number_read(tmp_path)
+        assert number == 1
+        assert "it claims to hold 0.016 GB" in warning
+
+    def test_an_array_that_lies_about_its_length(self, tmp_path: Path) -> None:
+        """The header of an array claims a terabyte; there is none."""
+        write_numbers(tmp_path, 1)
+        header = io.BytesIO()
+        shape = {"descr": "<f8", "fortran_order": False, "shape": (10**14,)}
+        np.lib.format.write_array_header_1_0(header, shape)
+        text = io.BytesIO()
+        np.save(text, np.frombuffer(json.dumps({"format": FORMAT}).encode(), dtype=np.uint8))
+        content = io.BytesIO()
+        with ZipFile(content, "w") as archive:
+            archive.writestr("number.npy", header.getvalue())
+            archive.writestr("text.npy", text.getvalue())
+        with_checksum(tmp_path / "checkpoint-000002.npz", content.getvalue())
+        assert number_read(tmp_path)[0] == 1
+
+
+class TestParts:
+    def test_are_not_read_and_can_be_cleaned(self, tmp_path: Path) -> None:
+        write_numbers(tmp_path, 1)
+        others = ["front.csv", "notes.part", "checkpoint-000001.npz.bak"]
+        for name in ["checkpoint-000002.part", *others]:
+            (tmp_path / name).write_text("half")
+        assert number_read(tmp_path) == (1, [])
+        clean_parts(tmp_path)
+        assert names(tmp_path) == sorted(["checkpoint-000001.npz", *others])
+
+    def test_what_cannot_be_removed_stays(self, tmp_path: Path) -> None:
+        (tmp_path / "checkpoint-000002.part").mkdir()
+        clean_parts(tmp_path)
+        assert names(tmp_path) == ["checkpoint-000002.part"]
+
+    def test_a_kill_while_writing_leaves_the_one_before(self, tmp_path: Path) -> None:
+        """A real kill in the middle of the content."""
+        write_numbers(tmp_path, 1)
+        code = (
+            "import io, os, sys\n"
+            "from pathlib import Path\n"
+            "import numpy as np\n"
+            "from stackopt import checkpoint\n"
+            "plain = os.fsync\n"
+            "def killed(handle):\n"
+            "    os.truncate(handle, 100)\n"
+            "    os.kill(os.getpid(), 9)\n"
+            "os.fsync = killed\n"
+            "checkpoint.write_checkpoint(Path(sys.argv[1]), {'number': np.array([2])}, {'number': 2})\n"
+        )
+        done = subprocess.run([sys.executable, "-c", code, str(tmp_path)], check=False)
+        assert done.returncode == -9
+        assert names(tmp_path) == ["checkpoint-000001.npz", "checkpoint-000002.part"]
+        assert number_read(tmp_path) == (1, [])
+        write_numbers(tmp_path, 2)
+        assert names(tmp_path) == ["checkpoint-000001.npz", "checkpoint-000002.npz"]
+
+
+def full(handle: int) -> None:
+    raise OSError(28, "No space left on device")
+
+
 class TestNoPickle:
     def test_a_pickle_is_refused(self, tmp_path: Path) -> None:
         """An array of objects with a right checksum: it is not unpickled, the checkpoint before is used."""
@@ -195,7 +299,7 @@ class Bomb:
 
 class TestCannotBeWritten:
     def test_missing_folder(self, tmp_path: Path) -> None:
-        with pytest.raises(RunError, match=r"cannot be written: .*; earlier checkpoints stand"):
+        with pytest.raises(RunError, match=r"gone: is gone: it was removed or renamed during the run"):
             write_numbers(tmp_path / "gone", 1)
 
     def test_something_in_the_way(self, tmp_path: Path) -> None:
@@ -204,6 +308,12 @@ class TestCannotBeWritten:
         with pytest.raises(RunError, match="checkpoint-000003"):
             write_numbers(tmp_path, 3)
         assert number_read(tmp_path) == (2, [])
+
+    def test_says_whether_there_is_an_earlier_one(self, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+        monkeypatch.setattr("stackopt.checkpoint.os.fsync", full)
+        with pytest.raises(RunError, match=r"cannot be written: No space left on device; there is no earlier one"):
+            write_numbers(tmp_path, 1)
+        assert names(tmp_path) == []
 
     @pytest.mark.skipif(os.geteuid() == 0, reason="root may write anywhere")
     def test_read_only_folder(self, tmp_path: Path) -> None:
@@ -219,16 +329,12 @@ class TestCannotBeWritten:
     def test_a_full_disk(self, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
         """The disk fills up while the content is brought to it: the old checkpoints are still there, and whole."""
         write_numbers(tmp_path, 1, 2)
-
-        def full(handle: int) -> None:
-            raise OSError(28, "No space left on device")
-
         monkeypatch.setattr("stackopt.checkpoint.os.fsync", full)
-        with pytest.raises(RunError, match="No space left on device"):
+        with pytest.raises(RunError, match="No space left on device; earlier checkpoints stand"):
             write_numbers(tmp_path, 3)
         monkeypatch.undo()
+        assert names(tmp_path) == ["checkpoint-000001.npz", "checkpoint-000002.npz"]
         assert number_read(tmp_path) == (2, [])
-        assert (tmp_path / "checkpoint-000001.npz").exists()
         write_numbers(tmp_path, 3)
         assert number_read(tmp_path) == (3, [])
 

@@ -225,6 +225,8 @@ def test_materials_lists_a_set(problem: Path, tmp_path: Path) -> None:
         (["search", "PROBLEM", "--hours", "-1"], "--hours: found -1; write a time above 0 hours"),
         (["search", "PROBLEM", "--hours", "nan"], "--hours: found nan"),
         (["search", "PROBLEM", "--workers", "0"], "--workers: found 0; write 1 or more"),
+        (["search", "PROBLEM", "--workers", "2", "--cluster", "a"], "--workers: cannot be given with --cluster"),
+        (["prove", "FOLDER", "--workers", "2", "--cluster", "a"], "--workers: cannot be given with --cluster"),
         (["search", "PROBLEM", "--seed", "-3"], "--seed: found -3; write a whole number from 0"),
         (["search"], "PROBLEM: is missing; name a problem file, or a run to go on with"),
         (["search", "PROBLEM", "--out", "FOLDER"], "which is not empty"),
@@ -297,6 +299,7 @@ def test_search_shows_front_statement_files_and_cautions(problem: Path, finished
         "resume": None,
         "allow_outside": False,
         "within": None,
+        "cluster": None,
     }
     for part in ("rank", "aluminium 200um", "Complete: invented.", "front.csv, trade_off.png", "not a measurement"):
         assert part in result.stdout
@@ -310,7 +313,14 @@ def test_resume_and_prove_take_a_run(finished: FakeRun) -> None:
     assert finished.options["resume"] == finished.folder
     assert run("prove", finished.folder, "--hours", "2").exit_code == 0
     assert finished.asked == finished.folder
-    assert finished.options == {"hours": 2.0, "workers": None, "within": None}
+    assert finished.options == {"hours": 2.0, "workers": None, "within": None, "cluster": None}
+
+
+def test_search_and_prove_on_a_cluster(problem: Path, finished: FakeRun) -> None:
+    assert run("search", problem, "--cluster", "tcp://10.0.0.5:8786").exit_code == 0
+    assert finished.options["cluster"] == "tcp://10.0.0.5:8786"
+    assert run("prove", finished.folder, "--cluster", "tcp://10.0.0.5:8786").exit_code == 0
+    assert finished.options["cluster"] == "tcp://10.0.0.5:8786"
 
 
 def test_an_empty_front_is_a_no(problem: Path, finished: FakeRun) -> None:

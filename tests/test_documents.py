@@ -32,6 +32,8 @@ MADE_BY_RUNS = {
     "trade_off.html",
     "pick-*/",
     "checkpoint-*.npz",
+    "status.json",
+    "run.lock",
 }
 """What a document may name although the repository does not hold it."""
 FENCE = re.compile(r"^```(\w+)\n(.*?)^```$", re.MULTILINE | re.DOTALL)

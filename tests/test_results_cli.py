@@ -128,6 +128,17 @@ def test_pick_asks_in_a_terminal(finished: Path, monkeypatch: pytest.MonkeyPatch
     assert (finished / "pick-1" / "build_sheet.html").exists()
 
 
+def test_pick_follows_no_link(finished: Path, tmp_path: Path) -> None:
+    """A run may come from a stranger: what looks like its own folder may be another place."""
+    elsewhere = tmp_path / "elsewhere"
+    elsewhere.mkdir()
+    (finished / "pick-2").symlink_to(elsewhere)
+    result = run("pick", finished, "--rank", "2")
+    assert result.exit_code == 2
+    assert "is a link to another place; name the folder with --out" in result.stderr
+    assert not any(elsewhere.iterdir())
+
+
 @pytest.mark.parametrize(
     ("options", "words"),
     [

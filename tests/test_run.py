@@ -5,7 +5,11 @@ from __future__ import annotations
 import json
 import os
 import re
+import shutil
 import signal
+import subprocess
+import sys
+import time
 from collections.abc import Callable
 from importlib.metadata import version
 from pathlib import Path
@@ -15,13 +19,15 @@ import pandas as pd
 import pytest
 from problem_files import write
 
-from stackopt.checkpoint import read_checkpoint
+from stackopt.checkpoint import read_checkpoint, write_checkpoint
 from stackopt.errors import InputError, InterruptedRunError, RunError
 from stackopt.front import COLUMNS
 from stackopt.readers import read_problem
-from stackopt.run import RunOptions, RunResult, input_hash, prove_run, read_record, search_run
+from stackopt.run import RunOptions, RunResult, prove_run, search_run
+from stackopt.run_folder import STRAY_AFTER_S, input_hash
 from stackopt.runs import read_run
 from stackopt.status import Status
+from stackopt.watching import look, read_record
 
 CHANGES = {
     'points = [["50 Hz", "8 dB"], ["1 kHz", "14 dB"], ["1 MHz", "90 dB"]]': (
@@ -67,12 +73,12 @@ def written(folder: Path, changes: dict[str, str]) -> Path:
     return write(inputs, changes)
 
 
-def run(path: Path, watcher: Callable[[Status], None] = quiet, **options: Any) -> RunResult:
-    return search_run(path, RunOptions(workers=2, **options), watcher)
+def run(path: Path, watcher: Callable[[Status], None] = quiet, workers: int = 1, **options: Any) -> RunResult:
+    return search_run(path, RunOptions(workers=workers, **options), watcher)
 
 
 def resume(folder: Path, watcher: Callable[[Status], None] = quiet, **options: Any) -> RunResult:
-    return search_run(None, RunOptions(workers=2, resume=folder, **options), watcher)
+    return search_run(None, RunOptions(workers=1, resume=folder, **options), watcher)
 
 
 def files_in(folder: Path) -> dict[str, bytes]:
@@ -83,7 +89,7 @@ def files_in(folder: Path) -> dict[str, bytes]:
 def finished(tmp_path_factory: pytest.TempPathFactory) -> RunResult:
     """A run with all its files."""
     folder = tmp_path_factory.mktemp("run")
-    return run(written(folder, CHANGES), out=folder / "result")
+    return run(written(folder, CHANGES), workers=2, out=folder / "result")
 
 
 class TestFolder:
@@ -262,8 +268,10 @@ class TestInterrupted:
             run(problem_file, interrupt_at(phase, number), out=tmp_path / "stopped")
         assert caught.value.exit_code == 130
         assert f"stackopt search --resume {tmp_path / 'stopped'}" in str(caught.value)
-        assert not (tmp_path / "stopped" / "front.csv").exists()
+        with pytest.raises(RunError, match="has no front yet"):  # there may be a front.csv of what was found so far
+            read_run(tmp_path / "stopped")
         assert read_record(tmp_path / "stopped")["finished"] is False
+        assert look(tmp_path / "stopped").state == "interrupted"
         again = resume(tmp_path / "stopped")
         assert again.folder == tmp_path / "stopped"
         assert results(again.folder) == results(finished.folder)
@@ -288,10 +296,20 @@ class TestInterrupted:
         resume(tmp_path / "stopped")
         assert results(tmp_path / "stopped") == results(straight.folder)
 
-    def test_asked_to_end(self, problem_file: Path, tmp_path: Path) -> None:
+    @pytest.mark.parametrize("sent", [signal.SIGTERM, signal.SIGHUP])
+    def test_asked_to_end(self, problem_file: Path, tmp_path: Path, sent: int) -> None:
         with pytest.raises(InterruptedRunError):
-            run(problem_file, interrupt_at("proving", sent=signal.SIGTERM), out=tmp_path / "stopped")
+            run(problem_file, interrupt_at("proving", sent=sent), out=tmp_path / "stopped")
         assert resume(tmp_path / "stopped").front.complete
+
+    def test_outlives_its_terminal_where_that_was_asked_for(self, problem_file: Path) -> None:
+        """As under nohup."""
+        before = signal.signal(signal.SIGHUP, signal.SIG_IGN)
+        try:
+            assert run(problem_file, interrupt_at("exploring", sent=signal.SIGHUP)).front.complete
+            assert signal.getsignal(signal.SIGHUP) is signal.SIG_IGN
+        finally:
+            signal.signal(signal.SIGHUP, before)
 
     def test_a_second_time_at_once(self, problem_file: Path, tmp_path: Path) -> None:
         def impatient(status: Status) -> None:
@@ -304,11 +322,12 @@ class TestInterrupted:
         assert resume(tmp_path / "stopped").front.complete
 
     def test_handlers_are_put_back(self, problem_file: Path) -> None:
-        before = [signal.getsignal(number) for number in (signal.SIGINT, signal.SIGTERM)]
+        numbers = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
+        before = [signal.getsignal(number) for number in numbers]
         run(problem_file, hours=1e-12)
         with pytest.raises(InterruptedRunError):
             run(problem_file, interrupt_at("exploring"))
-        assert [signal.getsignal(number) for number in (signal.SIGINT, signal.SIGTERM)] == before
+        assert [signal.getsignal(number) for number in numbers] == before
 
     def test_damaged_newest_checkpoint(
         self, problem_file: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str], finished: RunResult
@@ -384,6 +403,58 @@ class TestRefused:
         with pytest.raises(RunError, match="holds no checkpoint that can be read"):
             resume(folder)
 
+    @pytest.mark.parametrize("go_on", [resume, lambda folder: prove_run(folder, RunOptions(), quiet)])
+    def test_checkpoint_of_other_inputs(
+        self, folder: Path, problem_file: Path, tmp_path: Path, go_on: Callable[[Path], RunResult]
+    ) -> None:
+        problem_file.write_text(problem_file.read_text() + "\n# another one\n")
+        other = run(problem_file, hours=1e-12, out=tmp_path / "other").folder
+        for path in folder.glob("checkpoint-*.npz"):
+            path.unlink()
+        for path in other.glob("checkpoint-*.npz"):
+            shutil.copy(path, folder)
+        with pytest.raises(RunError, match="its checkpoint belongs to other inputs; start a new search"):
+            go_on(folder)
+
+    def test_another_format(self, folder: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+        monkeypatch.setattr("stackopt.checkpoint.FORMAT", 99)
+        with pytest.raises(RunError, match=r"its format is 2, this program writes 99.*; start the search again"):
+            resume(folder)
+
+    @pytest.mark.parametrize(
+        ("change", "reason"),
+        [
+            (lambda arrays, text: arrays.update(codes=arrays["codes"][None]), "its array codes has the wrong shape"),
+            (lambda arrays, text: arrays.pop("populations"), "it has no array populations"),
+            (
+                lambda arrays, text: arrays.update(populations=arrays["populations"] + 99),
+                "sheets that the problem does",
+            ),
+            (lambda arrays, text: text.update(round="1"), "its round cannot be '1'"),
+            (lambda arrays, text: text.update(tally={"unknown": 1}), "unknown"),
+        ],
+    )
+    def test_handmade_checkpoint(self, folder: Path, change: Callable[..., object], reason: str) -> None:
+        """Its checksum is right, its content is not what a search writes."""
+        arrays, text, _ = read_checkpoint(folder)
+        change(arrays, text)
+        write_checkpoint(folder, arrays, text)
+        with pytest.raises(RunError, match=rf"its checkpoint cannot be used.*{reason}") as caught:
+            resume(folder)
+        assert caught.value.exit_code == 2
+        assert not (folder / "status.json").exists()
+
+    @pytest.mark.parametrize("name", ["stackopt", "problem", "input_sha256", "seed", "finished"])
+    @pytest.mark.parametrize("value", [None, [], -1, "\x1b[31m"])
+    def test_odd_record(self, folder: Path, name: str, value: object) -> None:
+        change_record(folder, **{name: value})
+        if name == "finished":  # whatever is not true counts as not finished
+            assert resume(folder, hours=1e-12).folder == folder
+            return
+        with pytest.raises(RunError) as caught:
+            resume(folder)
+        assert "\x1b" not in str(caught.value)
+
     def test_inputs_gone(self, folder: Path) -> None:
         (folder / "inputs" / "problem.toml").unlink()
         with pytest.raises(InputError, match=r"problem\.toml"):
@@ -393,6 +464,150 @@ class TestRefused:
         result = run(written(tmp_path, MARGIN), hours=1e-12)
         with pytest.raises(InputError, match="this front cannot be proved: the objective margin"):
             prove_run(result.folder, RunOptions(), quiet)
+
+
+RIVAL = """
+import sys
+from pathlib import Path
+import stackopt.run
+from stackopt.errors import StackoptError
+from stackopt.outputs import page
+for module, name in ((stackopt.run, "write_trade_off"), (stackopt.run, "write_curves"), (page, "write_page")):
+    setattr(module, name, lambda *_: None)
+problem, out = map(Path, sys.argv[1:])
+print("ready", flush=True)
+sys.stdin.readline()
+try:
+    options = stackopt.run.RunOptions(hours=1e-12, workers=1, out=out)
+    stackopt.run.search_run(problem, options, lambda _: None)
+    print("done")
+except StackoptError as error:
+    print(error)
+    sys.exit(error.exit_code)
+"""
+
+KILLED = """
+import os, sys
+from pathlib import Path
+from stackopt.run import RunOptions, search_run
+
+def watch(status):
+    if status.phase == "exploring":
+        os.kill(os.getpid(), 9)
+
+search_run(Path(sys.argv[1]), RunOptions(workers=1, out=Path(sys.argv[2])), watch)
+"""
+
+
+@pytest.mark.usefixtures("_no_pictures")
+class TestOneWriter:
+    def test_a_second_one_is_refused(self, problem_file: Path, tmp_path: Path) -> None:
+        folder = tmp_path / "run"
+        refused: list[str] = []
+
+        def others(status: Status) -> None:
+            if status.phase != "exploring" or refused:
+                return
+            for go_on in (resume, lambda folder: prove_run(folder, RunOptions(), quiet)):
+                with pytest.raises(RunError) as caught:
+                    go_on(folder)
+                refused.append(str(caught.value))
+            with pytest.raises(RunError) as caught:
+                run(problem_file, out=folder)
+            refused.append(str(caught.value))
+            assert look(folder).state == "running"
+
+        assert run(problem_file, others, out=folder).front.complete
+        assert len(refused) == 3
+        for message in refused:
+            assert message.startswith(f"{folder}: is being worked on by process {os.getpid()} on ")
+        assert look(folder).state == "finished"
+
+    def test_nothing_is_left_of_the_lock(self, problem_file: Path, tmp_path: Path) -> None:
+        folder = run(problem_file, hours=1e-12, out=tmp_path / "run").folder
+        assert not {"run.lock", "status.json"} & set(files_in(folder))
+        with pytest.raises(InterruptedRunError):
+            resume(folder, interrupt_at("proving"))
+        assert {"run.lock", "status.json"} & set(files_in(folder)) == {"status.json"}
+
+    def test_a_folder_that_is_in_use_already(self, problem_file: Path, tmp_path: Path) -> None:
+        folder = tmp_path / "run"
+        folder.mkdir()
+        (folder / "notes.txt").write_text("mine")
+        with pytest.raises(RunError, match=r"is not empty; name a new folder, or go on with a run: --resume"):
+            run(problem_file, out=folder)
+        assert files_in(folder) == {"notes.txt": b"mine"}
+
+    def test_two_at_the_same_moment(self, problem_file: Path, tmp_path: Path) -> None:
+        command = [sys.executable, "-c", RIVAL, str(problem_file), str(tmp_path / "run")]
+        pipes: dict[str, Any] = {"stdin": subprocess.PIPE, "stdout": subprocess.PIPE, "text": True}
+        rivals = [subprocess.Popen(command, **pipes) for _ in range(2)]
+        for rival in rivals:
+            assert rival.stdout is not None
+            assert rival.stdout.readline() == "ready\n"
+        for rival in rivals:
+            assert rival.stdin is not None
+            rival.stdin.write("go\n")
+            rival.stdin.flush()
+        said = [rival.communicate()[0] for rival in rivals]
+        assert sorted(rival.returncode for rival in rivals) == [0, 2]
+        loser = next(text for text, rival in zip(said, rivals, strict=True) if rival.returncode == 2)
+        assert "is being worked on by process " in loser or "is not empty; name a new folder" in loser
+        assert read_run(tmp_path / "run").record["finished"] is True
+
+    def test_killed(self, problem_file: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+        folder = tmp_path / "run"
+        done = subprocess.run([sys.executable, "-c", KILLED, str(problem_file), str(folder)], check=False)
+        assert done.returncode == -signal.SIGKILL
+        (folder / "checkpoint-000009.part").write_text("half")
+        (folder / ".part-front-a.csv").write_text("half")
+        (folder / ".part-trade_off-b.html").write_text("another process writes it right now")
+        old = time.time() - STRAY_AFTER_S - 10.0
+        os.utime(folder / ".part-front-a.csv", (old, old))
+        state = look(folder)
+        assert state.state == "dead"
+        assert state.owner is not None
+        capsys.readouterr()
+        assert resume(folder).front.complete
+        assert f"note: took over the run from process {state.owner.process} on " in capsys.readouterr().err
+        assert look(folder).state == "finished"
+        assert [name for name in files_in(folder) if "part" in name] == [".part-trade_off-b.html"]
+
+
+@pytest.mark.usefixtures("_no_pictures")
+class TestGoingOnWithAFinishedRun:
+    def test_its_front_stays_usable(self, problem_file: Path, tmp_path: Path) -> None:
+        folder = run(problem_file, hours=1e-12, out=tmp_path / "run").folder
+        before = read_run(folder).front.rows
+        with pytest.raises(InterruptedRunError):
+            resume(folder, interrupt_at("proving"))
+        assert read_run(folder).front.rows == before
+        assert look(folder).state == "interrupted"
+
+    def test_alternatives_of_another_front_do_not_stay(self, problem_file: Path, tmp_path: Path) -> None:
+        folder = run(problem_file, out=tmp_path / "run", within=0.05).folder
+        before = (folder / "alternatives.csv").read_bytes()
+        resume(folder)
+        assert (folder / "alternatives.csv").read_bytes() == before
+        (folder / "front.csv").write_text("another front")
+        resume(folder)
+        assert not (folder / "alternatives.csv").exists()
+        assert read_run(folder).front.alternatives is None
+
+    def test_tables_of_two_fronts_are_never_read_together(
+        self, problem_file: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+    ) -> None:
+        folder = run(problem_file, hours=1e-12, out=tmp_path / "run").folder
+
+        def killed(*_: object) -> None:
+            raise KeyboardInterrupt
+
+        monkeypatch.setattr("stackopt.run.write_equals", killed)
+        with pytest.raises(KeyboardInterrupt):
+            resume(folder)
+        with pytest.raises(RunError, match="has no front yet"):
+            read_run(folder)
+        assert look(folder).reason == "stopped at once, without a last checkpoint"
 
 
 def change_record(folder: Path, **values: Any) -> None:
@@ -436,21 +651,30 @@ class TestHours:
         resume(short.folder)
         assert results(short.folder) == results(straight.folder)
 
-    def test_part_of_a_proof(self, problem_file: Path, tmp_path: Path, finished: RunResult) -> None:
+    def test_part_of_a_proof(
+        self, problem_file: Path, tmp_path: Path, finished: RunResult, monkeypatch: pytest.MonkeyPatch
+    ) -> None:
         """A proof stopped half way keeps what it has settled, and prove goes on from there."""
+        monkeypatch.setattr("stackopt.proof.WORK", 1)  # shares as small as they can be
+        settled: list[float] = []
+
+        def stop_half_way(status: Status) -> None:
+            if status.phase.startswith("proving") and not settled and 0.0 < (status.share_proved or 0.0) < 1.0:
+                settled.append(status.share_proved or 0.0)
+                os.kill(os.getpid(), signal.SIGINT)
+
         with pytest.raises(InterruptedRunError):
-            run(problem_file, interrupt_at("proving", 3), out=tmp_path / "short")
+            run(problem_file, stop_half_way, out=tmp_path / "short")
         arrays, _, _ = read_checkpoint(tmp_path / "short")
-        settled = arrays["proof_done"]
-        assert 0 < settled.sum() < len(settled)
-        fractions: list[float] = []
+        assert len(arrays["proof_pending"])
+        shares: list[float] = []
 
         def watch(status: Status) -> None:
             if status.phase.startswith(("preparing", "proving")):
-                fractions.append(status.fraction or 0.0)
+                shares.append(status.share_proved or 0.0)
 
         prove_run(tmp_path / "short", RunOptions(workers=1), watch)
-        assert max(fractions[:2]) >= settled.mean()
+        assert max(shares[:2]) >= settled[0]
         assert results(tmp_path / "short") == results(finished.folder)
 
 

@@ -45,7 +45,9 @@ def problem(tmp_path: Path) -> str:
     return write(tmp_path).name
 
 
-@pytest.mark.parametrize("arguments", [["--help"], ["-h"], ["--version"], ["search", "--help"], ["predict", "--help"]])
+@pytest.mark.parametrize(
+    "arguments", [["--help"], ["-h"], ["--version"], ["search", "--help"], ["predict", "--help"], ["status", "--help"]]
+)
 def test_help(tmp_path: Path, arguments: list[str]) -> None:
     code, loaded, printed = loaded_by(tmp_path, *arguments)
     assert code == 0
@@ -97,3 +99,11 @@ def test_materials(tmp_path: Path, problem: str) -> None:
     code, loaded, _ = loaded_by(tmp_path, "materials", "sets/set.toml")
     assert code == 0
     assert not loaded & (SEARCHES | {"matplotlib", "bokeh", "skrf"})
+
+
+def test_status(tmp_path: Path) -> None:
+    example = Path(__file__).parent.parent / "results" / "example"
+    code, loaded, printed = loaded_by(tmp_path, "status", str(example))
+    assert code == 0
+    assert "finished, complete" in printed
+    assert not loaded & (HEAVY | {"numpy"})

@@ -53,6 +53,31 @@ def test_quantities_are_read_in_si(text: str, kind: str, value: float) -> None:
     assert parse_quantity(text, kind) == pytest.approx(value, rel=1e-14)
 
 
+@pytest.mark.parametrize(
+    ("text", "kind"),
+    [
+        ("6283 rad/s", "frequency"),  # 1 kHz
+        ("60 rpm", "frequency"),
+        ("1 kBq", "frequency"),
+        ("1000 s^-1", "frequency"),
+        ("50 percent", "angle"),
+        ("1 Np", "angle"),
+        ("1 m/m", "angle"),
+        ("1 bit", "angle"),
+        ("20 dBm", "power"),
+        ("1 MS/m rad", "conductivity"),
+    ],
+)
+def test_units_that_convert_but_mean_something_else(text: str, kind: str) -> None:
+    with pytest.raises(ValueError, match=rf"^found '{re.escape(text)}', which is not an? {kind}; write"):
+        parse_quantity(text, kind)
+
+
+@pytest.mark.parametrize(("text", "kind"), [("-0 mm", "length"), ("-0.0 dB", "level"), ("-0 %", "ratio")])
+def test_minus_zero_is_zero(text: str, kind: str) -> None:
+    assert math.copysign(1.0, parse_quantity(text, kind)) == 1.0
+
+
 def test_the_same_thickness_is_the_same_number() -> None:
     assert parse_quantity("105 um", "length") == parse_quantity("0.105 mm", "length") == 105e-6
 

@@ -185,7 +185,7 @@ class TestProcesses:
     def test_interrupts_are_their_parents_business(self, processes: Processes) -> None:
         tables = processes.publish(None)
         (pid,) = set(gather(processes, process_id, tables, [()]))
-        for number in (signal.SIGINT, signal.SIGTERM):
+        for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP):
             os.kill(pid, number)
         assert pid in gather(processes, process_id, tables, [()] * 20)
 

@@ -25,7 +25,7 @@ def svg(figure: Figure) -> str:
     import matplotlib as mpl
 
     content = io.StringIO()
-    with mpl.rc_context({"svg.hashsalt": "stackopt", "svg.fonttype": "path"}):
+    with style.users_texts(figure), mpl.rc_context({"svg.hashsalt": "stackopt", "svg.fonttype": "path"}):
         figure.savefig(content, format="svg", metadata=dict.fromkeys(("Creator", "Date", "Format", "Type")))
     text = content.getvalue()
     return text[text.index("<svg") :]

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import sys
+from typing import TextIO
 
 from rich.console import Console
 
@@ -21,16 +22,16 @@ class PlainConsole(Console):
         raise SystemExit(0)
 
 
-def make_console(stderr: bool = False) -> PlainConsole:
+def make_console(stderr: bool = False, kind: type[PlainConsole] = PlainConsole) -> PlainConsole:
     """Return a console that reads no markup, emoji or colours into the user's text."""
     stream = sys.stderr if stderr else sys.stdout
-    known = stream.isatty() or "COLUMNS" in os.environ
-    return PlainConsole(stderr=stderr, markup=False, emoji=False, highlight=False, width=None if known else PIPE_WIDTH)
+    known = (stream is not None and stream.isatty()) or "COLUMNS" in os.environ
+    return kind(stderr=stderr, markup=False, emoji=False, highlight=False, width=None if known else PIPE_WIDTH)
 
 
-def drop_output() -> None:
-    """Let everything that is still to be written to standard output vanish."""
+def drop_output(stream: TextIO | None = None) -> None:
+    """Let everything that is still to be written to a stream vanish; standard output when left out."""
     try:
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        os.dup2(os.open(os.devnull, os.O_WRONLY), (stream or sys.stdout).fileno())
     except (OSError, ValueError):  # standard output is no file, as in tests
         return

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 import tempfile
 from collections.abc import Callable
@@ -9,11 +10,15 @@ from pathlib import Path
 
 from stackopt.errors import Finding, InputError
 
+PART = ".part-"
+"""How the name of a temporary file begins; a kill may leave one."""
+
 
 def write_whole(path: Path, write: Callable[[Path], None]) -> None:
     """Let ``write`` fill a temporary file beside ``path``, then give it its name.
 
-    A reader, or a run that is stopped, never sees half a file.
+    A reader, or a run that is stopped, never sees half a file; nor does anybody after a power cut, since the content is
+    on the disk before the name.
 
     Raises
     ------
@@ -22,17 +27,27 @@ def write_whole(path: Path, write: Callable[[Path], None]) -> None:
     """
     temporary = None
     try:
-        handle, name = tempfile.mkstemp(prefix=f".{path.stem}-", suffix=path.suffix, dir=path.parent)
+        handle, name = tempfile.mkstemp(prefix=f"{PART}{path.stem}-", suffix=path.suffix, dir=path.parent)
         os.close(handle)
         temporary = Path(name)
         write(temporary)
         temporary.chmod(0o666 & ~_umask())  # a temporary file is private, a result is not
+        _bring_to_disk(temporary)
         temporary.replace(path)
     except OSError as error:
         raise InputError(Finding(str(path), "", f"cannot be written: {_reason(path, error)}")) from None
     finally:
         if temporary is not None:
-            temporary.unlink(missing_ok=True)
+            with contextlib.suppress(OSError):  # a disk that has become read-only keeps it, and said so above
+                temporary.unlink(missing_ok=True)
+
+
+def _bring_to_disk(path: Path) -> None:
+    handle = os.open(path, os.O_RDWR)
+    try:
+        os.fsync(handle)
+    finally:
+        os.close(handle)
 
 
 def _umask() -> int:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import itertools
+import math
 import os
 from dataclasses import dataclass
 from importlib.metadata import version
@@ -31,7 +32,7 @@ from bokeh.plotting import figure
 from bokeh.resources import Resources
 
 from stackopt.choice import QUANTITIES
-from stackopt.front import COLUMNS, Front
+from stackopt.front import COLUMNS, Front, FrontRow
 from stackopt.outputs import page_data
 from stackopt.outputs.cautions import cautions
 from stackopt.outputs.files import write_whole
@@ -140,6 +141,10 @@ def _problem_words(front: Front) -> list[str]:
     return lines
 
 
+def _cost_words(row: FrontRow, currency: str) -> str:
+    return "no price" if math.isnan(row.cost_per_m2) else f"{row.cost_per_m2:.2f} {currency}/m²"
+
+
 @dataclass(frozen=True)
 class _Controls:
     limits: list[RangeSlider]
@@ -158,6 +163,7 @@ class _Page:
         self.labelled = page_data.page_rows(front)
         data = page_data.columns(front)
         data["margin_words"] = [row_margin_words(row, front.problem) for _, row in self.labelled]
+        data["cost_words"] = [_cost_words(row, front.problem.currency) for _, row in self.labelled]
         data["tightest_words"] = [format_frequency(row.tightest_hz) for _, row in self.labelled]
         self.stacks = ColumnDataSource(data, name="stacks")
         names = ("index", "style", "rank", "colour", "marker", "size", *page_data.quantities(front))
@@ -284,12 +290,12 @@ class _Page:
         return plot
 
     def _tooltips(self) -> list[tuple[str, str]]:
-        currency = self.front.problem.currency.replace("@", "").replace("{", "").replace("}", "")
+        # Texts of users come from columns, which are escaped; in the patterns they would be read as HTML.
         return [
             ("rank", "@rank @what"),
             ("stack", "@stack"),
             ("mass", "@mass{0.000} kg/m²"),
-            ("cost", f"@cost{{0.00}} {currency}/m²"),
+            ("cost", "@cost_words"),
             ("thickness", "@thickness{0.000} mm"),
             ("margin", "@margin_words at @tightest_words"),
         ]

@@ -4,6 +4,9 @@ from __future__ import annotations
 
 import os
 import textwrap
+import warnings
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -14,6 +17,7 @@ from matplotlib.backends.backend_agg import FigureCanvasAgg
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from matplotlib.patches import Patch
+from matplotlib.text import Text
 from matplotlib.ticker import FixedLocator, FuncFormatter, MaxNLocator, NullFormatter, ScalarFormatter
 from numpy.typing import NDArray
 
@@ -73,7 +77,23 @@ def save_figure(figure: Figure, path: str | os.PathLike[str]) -> None:
     InputError
         When the file cannot be written.
     """
-    write_whole(Path(path), lambda part: figure.savefig(part, dpi=DOTS_PER_INCH))
+    with users_texts(figure):
+        write_whole(Path(path), lambda part: figure.savefig(part, dpi=DOTS_PER_INCH))
+
+
+@contextmanager
+def users_texts(figure: Figure) -> Iterator[None]:
+    """Take the texts of a figure as they are while it is drawn.
+
+    Users write currencies and names with dollar signs, which are no formulas, and letters that the font does not have,
+    which become boxes.
+    """
+    for text in figure.findobj(Text):
+        text.set_parse_math(False)
+    with warnings.catch_warnings():
+        warnings.filterwarnings("ignore", "Glyph .* missing from", UserWarning)
+        warnings.filterwarnings("ignore", "Matplotlib currently does not support", UserWarning)
+        yield
 
 
 class FrequencyAxis:

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import time
+from collections.abc import Iterator
+from contextlib import contextmanager
 from types import TracebackType
 
 from rich.console import Group
@@ -19,8 +21,16 @@ SECONDS_BETWEEN_LINES = 5.0
 _BAR_WIDTH = 24
 
 
+class _LastingConsole(PlainConsole):
+    """A console whose reader may go away without ending the work: what nobody reads is dropped."""
+
+    def on_broken_pipe(self) -> None:
+        """Be silent from now on."""
+        self.quiet = True
+
+
 class TerminalProgress:
-    """Shows each status it is called with, on standard error.
+    """Shows each status it is called with, on standard error; that this cannot be written never stops the work.
 
     Use it as a context manager and hand it over as the watcher. In a terminal it keeps a live display and leaves a line
     for each finished phase; elsewhere it writes a line when the phase changes, and one every few seconds.
@@ -37,7 +47,7 @@ class TerminalProgress:
     """
 
     def __init__(self, console: PlainConsole | None = None) -> None:
-        self._console = console or make_console(stderr=True)
+        self._console = console or make_console(stderr=True, kind=_LastingConsole)
         self._live: Live | None = None
         self._status: Status | None = None
         self._started = self._written = 0.0
@@ -48,21 +58,36 @@ class TerminalProgress:
             self._live = Live(
                 console=self._console, auto_refresh=False, transient=True, redirect_stdout=False, redirect_stderr=False
             )
-            self._live.start()
+            with self._as_long_as_it_can_be_written():
+                self._live.start()
         return self
 
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
-        if self._live is not None:
-            self._live.stop()
-            self._live = None
-        if kind is None:
-            self._close_phase()
+        with self._as_long_as_it_can_be_written():
+            if self._live is not None:
+                self._live.stop()
+                self._live = None
+            if kind is None:
+                self._close_phase()
         self._status = None
 
     def __call__(self, status: Status) -> None:
         """Show a status."""
+        with self._as_long_as_it_can_be_written():
+            self._show(status)
+
+    @contextmanager
+    def _as_long_as_it_can_be_written(self) -> Iterator[None]:
+        """Fall silent when the terminal was closed or the log's disk is full."""
+        try:
+            yield
+        except OSError:
+            self._console.quiet = True
+            self._live = None
+
+    def _show(self, status: Status) -> None:
         now = time.monotonic()
         changed = self._status is None or status.phase != self._status.phase
         if changed:

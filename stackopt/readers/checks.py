@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
@@ -28,6 +29,8 @@ METAL_S_PER_M = 1e4
 """Materials that conduct better are metals, which corrode in touch with another."""
 FAR_FIELD = 3.0
 """Loops further apart than this over the wavenumber are nearly in each other's far field."""
+MAX_FREQUENCIES = 5000
+"""Of the search grids of all requirements together: the tables hold every sheet at each of them."""
 LARGE_LOOP = 5.0
 """Loop radius over distance up to which the quadrature promises its error."""
 
@@ -76,6 +79,8 @@ def check_draft(draft: Draft, source: Source) -> None:
     for check in (_sheets, _faces, _prices, _anodic, _limits):
         for key, message in check(draft):
             source.add(key, message)
+    for key, mistake in _grids(draft):
+        source.add(key, mistake)
     for key, requirement in draft.requirements:
         for mistake in _static(requirement):
             source.add(f"{key}.mask", mistake)
@@ -211,6 +216,25 @@ def _limits(draft: Draft) -> Iterator[Mistake]:
                 f"found {limit * scale:.4g} {unit}, which excludes every sheet in use: the smallest, {least}, "
                 f"has {value * scale:.4g} {unit}; raise the limit or use other sheets",
             )
+
+
+def _grids(draft: Draft) -> Iterator[Mistake]:
+    """Refuse masks that need more frequencies than the tables can hold."""
+    counts = {f"{key}.mask": _grid_size(requirement.mask) for key, requirement in draft.requirements}
+    if sum(counts.values()) > MAX_FREQUENCIES:
+        key = max(counts, key=counts.__getitem__)
+        yield (
+            key,
+            f"found a mask that is checked at {counts[key]} frequencies; all requirements together may have "
+            f"{MAX_FREQUENCIES}: lower points_per_decade, or write fewer points",
+        )
+
+
+def _grid_size(mask: Mask) -> int:
+    """Length of `Mask.grid_hz`, counted without making it."""
+    rising = [frequency for frequency in mask.frequency_hz if frequency > 0.0]
+    decades = (math.log10(high / low) for low, high in itertools.pairwise(rising))
+    return sum(max(1, math.ceil(span * mask.points_per_decade - 1e-9)) for span in decades) + 1
 
 
 def _static(requirement: Requirement) -> Iterator[str]:

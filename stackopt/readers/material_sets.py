@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import itertools
 import os
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from pathlib import Path
 from typing import Annotated, Any
 
@@ -93,7 +93,7 @@ class MaterialTable(Structure):
         yield from self._price_mistakes()
 
     def _price_mistakes(self) -> Iterator[tuple[str, str]]:
-        gauges = [format_thickness(gauge) for gauge in self.gauges or []]
+        gauges = dict.fromkeys(format_thickness(gauge) for gauge in self.gauges or [])
         for text in self.price_per_m2 or {}:
             key = join_key("price_per_m2", [text])
             try:
@@ -102,7 +102,7 @@ class MaterialTable(Structure):
                 yield key, str(error)
                 continue
             if self.gauges is not None and thickness not in gauges:
-                yield key, f"found a price for {text}, which is no gauge; gauges: {', '.join(gauges)}"
+                yield key, f"found a price for {text}, which is no gauge; gauges: {_few(gauges)}"
         if self.price_per_m2 is not None and self.thickness_range is not None:
             yield "price_per_m2", "found beside thickness_range; a material of any thickness needs price_per_kg"
 
@@ -229,6 +229,11 @@ def _without_origin(value: Mapping[str, Any]) -> Iterator[str]:
 def _repeated(gauges: list[float]) -> list[float]:
     rising = sorted(gauges)
     return [low for low, high in itertools.pairwise(rising) if high <= low * (1.0 + 1e-9)]
+
+
+def _few(words: Iterable[str], most: int = 20) -> str:
+    known = list(words)
+    return ", ".join(known[:most]) + (f" and {len(known) - most} more" if len(known) > most else "")
 
 
 def _is_range(span: list[float]) -> bool:

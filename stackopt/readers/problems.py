@@ -89,7 +89,7 @@ class StackTable(Structure):
     max_sheets: v.SheetCount
     max_thickness: v.Distance | None = None
     max_mass: v.AreaDensity | None = None
-    max_cost: v.Positive | None = None
+    max_cost: v.Cost | None = None
     bond: BondTable | None = None
     source_side: list[v.Layer] | None = None
     victim_side: list[v.Layer] | None = None
@@ -142,7 +142,9 @@ class SearchTable(Structure):
         )
 
 
-def read_problem(path: str | os.PathLike[str], allow_outside: bool = False) -> Problem:
+def read_problem(
+    path: str | os.PathLike[str], allow_outside: bool = False, fence: str | os.PathLike[str] | None = None
+) -> Problem:
     """Read a problem, its material set and all their tables.
 
     Parameters
@@ -151,15 +153,18 @@ def read_problem(path: str | os.PathLike[str], allow_outside: bool = False) -> P
         The TOML file.
     allow_outside : bool
         Whether tables may lie outside the folders of the problem and of its material set.
+    fence : path, optional
+        Folder that holds everything: no file outside it is read.
 
     Raises
     ------
     InputError
         With a finding for every mistake in any of the files.
     """
-    reading = Reading(allow_outside)
+    reading = Reading(allow_outside, None if fence is None else Path(fence))
     source = Source(Path(path), reading)
     try:
+        reading.check_fence(source.path)
         data = parse_toml(reading.read_text(source.path))
     except ValueError as error:
         source.add("", str(error))
@@ -194,7 +199,11 @@ def _read_set(name: object, source: Source) -> MaterialSet | None:
     """Read the material set that a problem names, and note the names that the problem may use."""
     if not isinstance(name, str) or not name.strip():
         return None  # the problem's own structure says so
-    inner = Source(Path(os.path.normpath(source.path.parent / name.strip())), source.reading)
+    try:
+        inner = Source(source.beside(name.strip()), source.reading)
+    except ValueError as error:
+        source.add("materials", str(error))
+        return None
     try:
         text = source.reading.read_text(inner.path)
     except ValueError as error:
@@ -300,4 +309,5 @@ def _layers(layers: list[tuple[str, float]] | None) -> Stack:
 
 
 def _repeats(words: list[str] | tuple[str, ...]) -> list[tuple[int, str]]:
-    return [(number, word) for number, word in enumerate(words) if word in words[:number]]
+    first: dict[str, int] = {}
+    return [(number, word) for number, word in enumerate(words) if first.setdefault(word, number) != number]

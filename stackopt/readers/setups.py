@@ -232,18 +232,25 @@ def _coils(table: SetupTable, source: Source) -> Coils | None:
 def _read_sweeps(rows: list[SweepTable], floor: str | None, source: Source) -> list[Sweep]:
     jobs = []
     for number, row in enumerate(rows):
-        try:
-            path = source.locate(row.file)
-            without = None if row.without is None else source.locate(row.without)
-        except ValueError as error:
-            source.add(join_key("", ["sweep", number, "file"]), str(error))
-            continue
-        jobs.append(partial(read_sweep, path, floor or row.floor, without))
+        path = _located(row.file, join_key("", ["sweep", number, "file"]), source)
+        without = (
+            None if row.without is None else _located(row.without, join_key("", ["sweep", number, "without"]), source)
+        )
+        if path is not None and (without is not None or row.without is None):
+            jobs.append(partial(read_sweep, path, floor or row.floor, without))
     try:
         return read_all(jobs)
     except InputError as error:
         source.reading.findings.extend(error.findings)
         return []
+
+
+def _located(name: str, key: str, source: Source) -> Path | None:
+    try:
+        return source.locate(name)
+    except ValueError as error:
+        source.add(key, str(error))
+        return None
 
 
 def _with_coils(row: SweepTable, sweep: Sweep, coils: Coils) -> SheetSweep:

@@ -23,6 +23,8 @@ _SHEET = re.compile(r"(?P<name>.*\S)\s+(?P<thickness>[+-]?[\d.]\S*(?:\s*[^\s\d]+
 _SIZE = re.compile(r"(?P<first>[^x×]+?)\s*[x×]\s*(?P<second>[^x×]+)")
 _EXAMPLE = '"steel 150um / copper 35um"'
 _EXAMPLE_SIZE = '"120mm x 80mm"'
+MOST_SHEETS = 100
+"""Of a stack that is typed; a search has at most 20."""
 STACK_SUFFIX = ".toml"
 """Names that end so are stack files, not stacks."""
 
@@ -32,7 +34,7 @@ class StackFile(Structure):
 
     title: v.Text | None = None
     problem: v.Text | None = None
-    sheets: Annotated[list[v.Layer], Field(min_length=1)]
+    sheets: Annotated[list[v.Layer], Field(min_length=1, max_length=MOST_SHEETS)]
     bond: v.Layer | None = None
 
 
@@ -129,11 +131,15 @@ def parse_stack(text: str, problem_materials: Collection[str]) -> Stack:
     (Sheet(material='steel', thickness_m=0.00015), Sheet(material='copper', thickness_m=3.5e-05))
     """
     sheets, findings = [], []
-    for number, part in enumerate(text.split("/"), start=1):
+    parts = text.split("/")
+    if len(parts) > MOST_SHEETS:
+        message = f"found {len(parts)} sheets; a stack has up to {MOST_SHEETS}"
+        raise InputError(Finding("", f"stack {show(text.strip())}", message))
+    for number, part in enumerate(parts, start=1):
         try:
             sheets.append(_sheet(" ".join(part.split()), problem_materials))
         except ValueError as error:
-            findings.append(Finding("", f"stack {text.strip()!r}, sheet {number}", str(error)))
+            findings.append(Finding("", f"stack {show(text.strip())}, sheet {number}", str(error)))
     if findings:
         raise InputError(findings)
     return tuple(sheets)
@@ -145,9 +151,9 @@ def _sheet(part: str, names: Collection[str]) -> Sheet:
     match = _SHEET.fullmatch(part)
     if part in names or match is None:
         raise ValueError(
-            f"found {part!r}, which has no thickness; write a material and a thickness, such as {_EXAMPLE}"
+            f"found {show(part)}, which has no thickness; write a material and a thickness, such as {_EXAMPLE}"
         )
     name = match["name"]
     if name not in names:
-        raise ValueError(f"found {name!r}, which the material set does not hold; {nearest(name, names)}")
+        raise ValueError(f"found {show(name)}, which the material set does not hold; {nearest(name, names)}")
     return Sheet(name, read_thickness(match["thickness"]))

@@ -103,6 +103,8 @@ def _message(model: type[Structure], detail: ErrorDetails) -> str:
         return f"{found}; write a list in brackets{double}"
     if kind == "too_short":
         return "found an empty list; write at least one entry or leave the key out"
+    if kind == "too_long":
+        return f"found {detail['ctx']['actual_length']} entries; write up to {detail['ctx']['max_length']}"
     return f"{found}; it cannot be used here"
 
 

@@ -12,8 +12,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stackopt.errors import Finding, InputError
-from stackopt.readers.files import read_text
+from stackopt.readers.files import lines_of, read_text
 from stackopt.readers.numerals import Cell, Numerals
+from stackopt.readers.tables import MAX_ROWS
 from stackopt.units import format_frequency, parse_quantity, show
 
 Real = NDArray[np.float64]
@@ -26,6 +27,8 @@ FORMS = (("without_v", "with_v"), ("without_db", "with_db"), ("attenuation_db",)
 """Columns that a sweep may have beside its frequency."""
 _FORMS_TEXT = "; ".join(",".join((FREQUENCY, *form)) for form in FORMS)
 LARGEST_DB, LARGEST_HZ = 1e3, 1e12
+MAX_LINE = 10_000
+"""Characters of a line."""
 MAX_FINDINGS = 10
 MAX_NAMED = 6
 """Frequencies or lines that a remark names one by one."""
@@ -110,11 +113,17 @@ def _read_csv(path: Path) -> tuple[Levels, list[str]]:
         raise InputError(Finding(str(path), "", str(error))) from None
     lines = [
         (number, line)
-        for number, line in enumerate(text.splitlines(), start=1)
+        for number, line in enumerate(lines_of(text), start=1)
         if line.strip() and not line.lstrip().startswith("#")
     ]
     if not lines:
         raise InputError(Finding(str(path), "", f"holds no header and no numbers; write one of: {_FORMS_TEXT}"))
+    longest = max(lines, key=lambda line: len(line[1]))
+    if len(longest[1]) > MAX_LINE:
+        message = f"has {len(longest[1])} characters; lines up to {MAX_LINE} are read"
+        raise InputError(Finding(str(path), f"line {longest[0]}", message))
+    if len(lines) - 1 > MAX_ROWS:
+        raise InputError(Finding(str(path), "", f"has {len(lines) - 1} lines of numbers; up to {MAX_ROWS} are read"))
     number, header = lines[0]
     divider = ";" if ";" in header else ","
     names = [name.strip().strip('"').lower() for name in header.split(divider)]

@@ -10,13 +10,17 @@ from pathlib import Path
 
 from stackopt.errors import Finding, InputError
 from stackopt.physics.permeability import Table
-from stackopt.readers.files import read_text
+from stackopt.readers.files import lines_of, read_text
 from stackopt.units import show
 
 MASK_COLUMNS = ("frequency_hz", "attenuation_db")
 LEVEL_COLUMNS = ("frequency_hz", "level_db")
 PERMEABILITY_COLUMNS = ("frequency_hz", "mu_real", "mu_imag")
 MAX_LINES_REPORTED = 10
+MAX_ROWS = 100_000
+LOWEST_HZ, HIGHEST_HZ = 1e-6, 1e15
+LARGEST = {"attenuation_db": 1e4, "level_db": 1e4, "mu_real": 1e9, "mu_imag": 1e9}
+"""Bounds far outside of what is ever measured; beyond them the arithmetic would overflow."""
 
 Columns = tuple[tuple[float, ...], ...]
 Curve = tuple[tuple[float, ...], tuple[float, ...]]
@@ -102,7 +106,12 @@ def parse_table(path: Path, text: str, columns: tuple[str, ...]) -> Columns:
         found = show(",".join(header)) if header else "nothing"
         message = f"found {found}; the header must be {','.join(columns)} (commas between columns, points in numbers)"
         raise InputError(Finding(str(path), f"line {number}", message))
-    for number, cells in lines:
+    for count, (number, cells) in enumerate(lines):
+        if count == MAX_ROWS:
+            findings.append(
+                Finding(str(path), f"line {number}", f"is beyond {MAX_ROWS} lines of numbers; thin them out")
+            )
+            break
         try:
             rows.append(_row(cells, columns, rows[-1][0] if rows else -1.0))
         except ValueError as error:
@@ -125,7 +134,7 @@ def _text(path: Path) -> str:
 
 
 def _lines(text: str) -> Iterator[tuple[int, list[str]]]:
-    for number, line in enumerate(text.splitlines(), start=1):
+    for number, line in enumerate(lines_of(text), start=1):
         if line.strip() and not line.lstrip().startswith("#"):
             try:
                 cells = next(csv.reader([line]))
@@ -139,6 +148,7 @@ def _row(cells: list[str], columns: tuple[str, ...], before_hz: float) -> tuple[
         raise ValueError(f"found {len(cells)} columns; write {len(columns)}: {','.join(columns)}")
     row = tuple(_number(cell, column) for cell, column in zip(cells, columns, strict=True))
     frequency = row[0]
+    _check_bounds(row, columns)
     if frequency < 0.0 or (frequency == 0.0 and columns != MASK_COLUMNS):
         raise ValueError(f"found frequency_hz {frequency:g} Hz; it must be above 0 Hz")
     if frequency <= before_hz:
@@ -151,6 +161,16 @@ def _row(cells: list[str], columns: tuple[str, ...], before_hz: float) -> tuple[
     if columns == PERMEABILITY_COLUMNS:
         _check_permeability(row[1], row[2])
     return row
+
+
+def _check_bounds(row: tuple[float, ...], columns: tuple[str, ...]) -> None:
+    if row[0] > HIGHEST_HZ or 0.0 < row[0] < LOWEST_HZ:
+        raise ValueError(
+            f"found frequency_hz {row[0]:g} Hz; write at least {LOWEST_HZ:g} Hz and at most {HIGHEST_HZ:g} Hz"
+        )
+    for value, column in zip(row[1:], columns[1:], strict=True):
+        if abs(value) > LARGEST[column]:
+            raise ValueError(f"found {column} {value:g}; write at most {LARGEST[column]:g} to either side of 0")
 
 
 def _check_permeability(real: float, imag: float) -> None:
@@ -170,4 +190,4 @@ def _number(cell: str, column: str) -> float:
         value = math.nan
     if not math.isfinite(value) or "_" in cell:
         raise ValueError(f"found {show(cell)} as {column}; write a finite number with a decimal point")
-    return value
+    return value + 0.0  # -0 is 0

@@ -10,10 +10,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from stackopt.errors import Finding, InputError
-from stackopt.readers.files import read_text
+from stackopt.readers.files import lines_of, read_text
 
 Real = NDArray[np.float64]
 
+MAX_LINES, MAX_LINE = 100_000, 1000
 SAME_FREQUENCY = 1e-6
 """Relative difference up to which two analysers' frequencies are one."""
 
@@ -62,9 +63,13 @@ def _read(path: Path) -> Any:
         message = 'needs scikit-rf, which is not installed; install it with pip install "stackopt[touchstone]"'
         raise InputError(Finding(str(path), "", f"{message}, or export CSV")) from None
     try:
-        read_text(path)
+        lines = lines_of(read_text(path))
     except ValueError as error:
         raise InputError(Finding(str(path), "", str(error))) from None
+    longest = max(map(len, lines))
+    if longest > MAX_LINE or len(lines) > MAX_LINES:  # the reader of the format takes hours for some of them
+        message = f"has {len(lines)} lines of up to {longest} characters; {MAX_LINES} of up to {MAX_LINE} are read"
+        raise InputError(Finding(str(path), "", message))
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import functools
 import math
+import unicodedata
 from collections.abc import Callable
 from typing import Annotated, Any
 
@@ -18,6 +20,18 @@ from stackopt.units import UNITS, parse_quantity, show
 
 MAX_SHEETS = 20
 MAX_THICKNESS_M = 1.0
+MAX_TEXT = 2000
+"""Characters of a title, a name or a note."""
+LARGEST_NUMBER = 1e9
+LARGEST_PRICE = 1e11
+"""Per m^2 or per kg; what a search sums must fit into 64-bit integers of millionths."""
+MAX_HZ = "1 PHz"
+MAX_LENGTH = "1000 km"
+MAX_DB = "10000 dB"
+"""Bounds far outside of what is ever built; beyond them the arithmetic would overflow instead of telling anything."""
+SMALLEST = {"length": 1e-9, "frequency": 1e-6}
+"""Per kind, SI units: what lies between this and 0 can only be a slip. Sums of a search count whole picometres."""
+SMALLEST_OF_ALL = 1e-30
 REPORTED = "reported"
 """Type of a pydantic error whose findings are in the list already."""
 
@@ -29,8 +43,9 @@ def _quantity(
 
     def read(value: object) -> float:
         number = parse_quantity(value, kind)
-        too_low = low is not None and _below(number, parse_quantity(low, kind), above)
-        if too_low or (high is not None and number > parse_quantity(high, kind)):
+        _refuse_tiny(value, number, SMALLEST.get(kind, SMALLEST_OF_ALL), UNITS[kind][0])
+        too_low = low is not None and _below(number, _bound(low, kind), above)
+        if too_low or (high is not None and number > _bound(high, kind)):
             bounds = [f"above {low}" if above else f"at least {low}"] if low is not None else []
             bounds += [f"at most {high}"] if high is not None else []
             raise ValueError(f"found {show(value)}; it must be {' and '.join(bounds)}")
@@ -39,13 +54,24 @@ def _quantity(
     return read
 
 
+@functools.cache
+def _bound(text: str, kind: str) -> float:
+    return parse_quantity(text, kind)
+
+
+def _refuse_tiny(value: object, number: float, smallest: float, unit: str = "") -> None:
+    if 0.0 < abs(number) < smallest:
+        raise ValueError(f"found {show(value)}, too small to be meant; write at least {f'{smallest:g} {unit}'.strip()}")
+
+
 def _below(number: float, low: float, above: bool) -> bool:
     return number <= low if above else number < low
 
 
-def _number(low: float, high: float = math.inf, *, above: bool = False) -> Callable[[object], float]:
+def _number(low: float, high: float, *, above: bool = False, smallest: float = 0.0) -> Callable[[object], float]:
     def read(value: object) -> float:
         number = _real(value)
+        _refuse_tiny(value, number, smallest)
         if _below(number, low, above) or number > high:
             raise ValueError(f"found {show(value)}; it must be {_bounds(low, high, above)}")
         return number
@@ -62,12 +88,11 @@ def _real(value: object) -> float:
         number = math.inf
     if not math.isfinite(number):
         raise ValueError(f"found {show(value)}; write a finite number")
-    return number
+    return number + 0.0  # -0 is 0
 
 
 def _bounds(low: float, high: float, above: bool) -> str:
-    lower = f"above {low:g}" if above else f"at least {low:g}"
-    return lower if math.isinf(high) else f"{lower} and at most {high:g}"
+    return f"{f'above {low:g}' if above else f'at least {low:g}'} and at most {high:g}"
 
 
 def _integer(low: int, high: int) -> Callable[[object], int]:
@@ -91,6 +116,11 @@ def _word(*known: str) -> Callable[[object], str]:
 def _text(value: object) -> str:
     if not isinstance(value, str) or not value.strip():
         raise ValueError(f"found {show(value)}; write some text in quotes")
+    if len(value) > MAX_TEXT or any(unicodedata.category(letter) in ("Cc", "Cs") for letter in value):
+        raise ValueError(
+            f"found {show(value)}; write up to {MAX_TEXT} characters, without line ends, tabs and other control "
+            "characters"
+        )
     return value.strip()
 
 
@@ -121,7 +151,7 @@ def _point(value: object) -> tuple[float, float]:
         raise ValueError(
             f'found {show(value)}; write a point as a frequency and an attenuation, such as ["1 kHz", "14 dB"]'
         )
-    return _quantity("frequency", "0 Hz")(value[0]), _quantity("level", "0 dB")(value[1])
+    return _quantity("frequency", "0 Hz", MAX_HZ)(value[0]), _quantity("level", "0 dB", MAX_DB)(value[1])
 
 
 def _drive_point(value: object) -> tuple[float, object]:
@@ -129,7 +159,7 @@ def _drive_point(value: object) -> tuple[float, object]:
         raise ValueError(
             f'found {show(value)}; write a point of the drive as a frequency and a peak, such as ["100 kHz", "12 A"]'
         )
-    return _quantity("frequency", "0 Hz")(value[0]), value[1]
+    return _quantity("frequency", "0 Hz", MAX_HZ)(value[0]), value[1]
 
 
 def _tolerance(value: object) -> tuple[float, float]:
@@ -149,7 +179,7 @@ def _tolerance(value: object) -> tuple[float, float]:
             f"found {show(value)}; a tolerance to both sides must be at least 0 % and below 100 % "
             '(write unequal sides as ["-50 %", "+100 %"])'
         )
-    return -size, size
+    return 0.0 - size, size
 
 
 def _source(info: ValidationInfo) -> Source:
@@ -193,7 +223,7 @@ def _permeability(value: object, info: ValidationInfo) -> Table:
 
 
 read_thickness = _quantity("length", "0 mm", f"{MAX_THICKNESS_M:g} m", above=True)
-read_positive = _number(0.0, above=True)
+read_positive = _number(0.0, LARGEST_NUMBER, above=True, smallest=1.0 / LARGEST_NUMBER)
 
 Text = Annotated[str, PlainValidator(_text)]
 Flag = Annotated[bool, PlainValidator(_flag)]
@@ -203,19 +233,20 @@ Assumption = Annotated[str, PlainValidator(_word(*ASSUMPTIONS))]
 YieldGoal = Annotated[float, PlainValidator(_quantity("ratio", "50 %", "99.9 %"))]
 Polarisation = Annotated[str, PlainValidator(_word("TE", "TM"))]
 Thickness = Annotated[float, PlainValidator(read_thickness)]
-Distance = Annotated[float, PlainValidator(_quantity("length", "0 mm", above=True))]
-Gap = Annotated[float, PlainValidator(_quantity("length", "0 mm"))]
-Frequency = Annotated[float, PlainValidator(_quantity("frequency", "0 Hz", above=True))]
+Distance = Annotated[float, PlainValidator(_quantity("length", "0 mm", MAX_LENGTH, above=True))]
+Gap = Annotated[float, PlainValidator(_quantity("length", "0 mm", MAX_LENGTH))]
+Frequency = Annotated[float, PlainValidator(_quantity("frequency", "0 Hz", MAX_HZ, above=True))]
 Angle = Annotated[float, PlainValidator(_quantity("angle", "0 deg", "89.9 deg"))]
-Conductivity = Annotated[float, PlainValidator(_quantity("conductivity", "0 S/m"))]
-Density = Annotated[float, PlainValidator(_quantity("density", "0 kg/m^3", above=True))]
-AreaDensity = Annotated[float, PlainValidator(_quantity("area density", "0 kg/m^2", above=True))]
-FluxDensity = Annotated[float, PlainValidator(_quantity("flux density", "0 T", above=True))]
-Potential = Annotated[float, PlainValidator(_quantity("potential"))]
-PotentialGap = Annotated[float, PlainValidator(_quantity("potential", "0 V"))]
-Margin = Annotated[float, PlainValidator(_quantity("level", "0 dB"))]
+Conductivity = Annotated[float, PlainValidator(_quantity("conductivity", "0 S/m", "1 TS/m"))]
+Density = Annotated[float, PlainValidator(_quantity("density", "0 kg/m^3", "100000 kg/m^3", above=True))]
+AreaDensity = Annotated[float, PlainValidator(_quantity("area density", "0 kg/m^2", "1000000 kg/m^2", above=True))]
+FluxDensity = Annotated[float, PlainValidator(_quantity("flux density", "0 T", "1000 T", above=True))]
+Potential = Annotated[float, PlainValidator(_quantity("potential", "-1000 V", "1000 V"))]
+PotentialGap = Annotated[float, PlainValidator(_quantity("potential", "0 V", "1000 V"))]
+Margin = Annotated[float, PlainValidator(_quantity("level", "0 dB", MAX_DB))]
 Positive = Annotated[float, PlainValidator(read_positive)]
-NotNegative = Annotated[float, PlainValidator(_number(0.0))]
+NotNegative = Annotated[float, PlainValidator(_number(0.0, LARGEST_PRICE))]
+Cost = Annotated[float, PlainValidator(_number(0.0, LARGEST_PRICE, above=True))]
 Broadening = Annotated[float, PlainValidator(_number(0.0, 0.999))]
 SheetCount = Annotated[int, PlainValidator(_integer(1, MAX_SHEETS))]
 PointsPerDecade = Annotated[int, PlainValidator(_integer(1, 1000))]
@@ -225,10 +256,10 @@ Layer = Annotated[tuple[str, float], PlainValidator(_layer)]
 Point = Annotated[tuple[float, float], PlainValidator(_point)]
 DrivePoint = Annotated[tuple[float, Any], PlainValidator(_drive_point)]
 Fraction = Annotated[float, PlainValidator(_quantity("ratio", "0 %", "100 %", above=True))]
-Change = Annotated[float, PlainValidator(_quantity("ratio", "0 %", above=True))]
-Power = Annotated[float, PlainValidator(_quantity("power", "0 W", above=True))]
-Inductance = Annotated[float, PlainValidator(_quantity("inductance", "0 H", above=True))]
-Rayleigh = Annotated[float, PlainValidator(_quantity("rayleigh coefficient", "0 m/A"))]
+Change = Annotated[float, PlainValidator(_quantity("ratio", "0 %", "10000 %", above=True))]
+Power = Annotated[float, PlainValidator(_quantity("power", "0 W", "1 GW", above=True))]
+Inductance = Annotated[float, PlainValidator(_quantity("inductance", "0 H", "1 MH", above=True))]
+Rayleigh = Annotated[float, PlainValidator(_quantity("rayleigh coefficient", "0 m/A", "1000000 m/A"))]
 TolerancePair = Annotated[tuple[float, float], PlainValidator(_tolerance)]
 MaskCurve = Annotated[Curve, PlainValidator(_curve(MASK_COLUMNS))]
 LevelCurve = Annotated[Curve, PlainValidator(_curve(LEVEL_COLUMNS))]

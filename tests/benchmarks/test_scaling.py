@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 
+import numpy as np
 import pytest
 from conditions import empty_archive, reference, warm
 from pytest_benchmark.fixture import BenchmarkFixture
@@ -18,6 +19,9 @@ SIZES = {
     "base": (5, 5, 8, 0.02),
     "27 sheets": (3, 5, 8, 0.02),
     "36 sheets": (4, 5, 8, 0.02),
+    "81 sheets": (9, 5, 8, 0.02),
+    "81 sheets, depth 4": (9, 4, 8, 0.02),
+    "198 sheets, depth 4": (22, 4, 8, 0.02),
     "depth 4": (5, 4, 8, 0.02),
     "depth 6": (5, 6, 8, 0.02),
     "half the frequencies": (5, 5, 4, 0.02),
@@ -28,11 +32,11 @@ SIZES = {
 
 
 def sized(gauges: int, max_sheets: int, points_per_decade: int) -> Problem:
-    """The reference problem with the first gauges of every material."""
+    """The reference problem with the first gauges of every material, or with more of them in the same range."""
     problem = reference(MASK)
     (requirement,) = problem.requirements
     materials = {
-        name: replace(known, gauges_m=known.gauges_m[:gauges]) if known.gauges_m else known
+        name: replace(known, gauges_m=some_gauges(known.gauges_m, gauges)) if known.gauges_m else known
         for name, known in problem.materials.items()
     }
     return replace(
@@ -41,6 +45,12 @@ def sized(gauges: int, max_sheets: int, points_per_decade: int) -> Problem:
         requirements=(replace(requirement, mask=replace(requirement.mask, points_per_decade=points_per_decade)),),
         rules=replace(problem.rules, max_sheets=max_sheets),
     )
+
+
+def some_gauges(known: tuple[float, ...], count: int) -> tuple[float, ...]:
+    if count <= len(known):
+        return known[:count]
+    return tuple(float(gauge) for gauge in np.geomspace(known[0], known[-1], count).round(9))
 
 
 @pytest.mark.parametrize("size", SIZES)

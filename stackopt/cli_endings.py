@@ -5,7 +5,9 @@ from __future__ import annotations
 import contextlib
 import errno
 import os
+import signal
 import sys
+import threading
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from typing import Any, TextIO
@@ -66,6 +68,9 @@ def guarded() -> Iterator[None]:
         code, message = _explained(error)
         tell(message)
         raise SystemExit(code) from None
+    except KeyboardInterrupt:
+        tell("Interrupted.")
+        raise SystemExit(130) from None
     finally:
         _settle()
 
@@ -111,7 +116,12 @@ _OF_WRITING = {errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EIO, errno.EBADF, 
 
 
 def _settle() -> None:
-    """Empty the streams, and drop what cannot be written: the interpreter would end with an exit code of its own."""
+    """Prepare to leave: an interrupt has nothing left to interrupt, and streams that cannot be written are dropped.
+
+    The interpreter would end with a traceback for the one and an exit code of its own for the other.
+    """
+    if threading.current_thread() is threading.main_thread():
+        signal.signal(signal.SIGINT, signal.SIG_IGN)
     for stream in (sys.stdout, sys.stderr):
         try:
             stream.flush()

@@ -22,19 +22,23 @@ import pytest
 from stackopt import attenuation, read_problem
 from stackopt.checkpoint import read_checkpoint
 
-KILLS = 7
-"""At least so many of each of four kinds of run."""
+KILLS = 13
+"""At least so many of each of the two kinds of run."""
 EXPLORED, PROVED = "explored", "proved"
 COMMAND = """
 import sys
+import types
 import stackopt.run
-stackopt.run.CHECKPOINT_EVERY_S = 0.05
+stackopt.run.CHECKPOINT_EVERY_S = 0.5
+# What is drawn takes most of the time of so short a run; the tables and the record stay.
+stackopt.run.write_trade_off = stackopt.run.write_curves = lambda *_: None
+sys.modules["stackopt.outputs.page"] = types.SimpleNamespace(write_page=lambda *_: None)
 from stackopt.cli import main
 sys.argv[0] = "stackopt"
 main()
 """
 KEYS = ("conductivity", "density", "permeability", "price_per_kg")
-MASKS = {EXPLORED: ("6 dB", "20 dB"), PROVED: ("24 dB", "110 dB")}
+MASKS = {EXPLORED: ("6 dB", "20 dB"), PROVED: ("24 dB", "90 dB")}
 OBJECTIVES = {EXPLORED: '["mass", "margin"]', PROVED: '["mass", "cost", "thickness"]'}
 
 
@@ -95,7 +99,8 @@ def start(*arguments: str, cwd: Path) -> subprocess.Popen[str]:
 
 def outcome(process: subprocess.Popen[str]) -> tuple[int, str]:
     text, _ = process.communicate(timeout=300)
-    assert "Traceback" not in text, text
+    if process.returncode != -signal.SIGKILL:  # a worker process that is just being made says that its parent is gone
+        assert "Traceback" not in text, text
     return process.returncode, text
 
 
@@ -109,7 +114,7 @@ class Reader(threading.Thread):
         self.stacks: set[str] = set()
 
     def run(self) -> None:
-        while not self.done.wait(0.01):
+        while not self.done.wait(0.03):
             try:
                 frame = pd.read_csv(self.path)
                 assert frame["rank"].tolist() == list(range(1, len(frame) + 1))
@@ -123,24 +128,23 @@ class Reader(threading.Thread):
 
 
 @pytest.mark.slow
-@pytest.mark.parametrize(("kind", "workers"), [(EXPLORED, 1), (EXPLORED, 2), (PROVED, 1), (PROVED, 2)])
-def test_killed_again_and_again(tmp_path: Path, kind: str, workers: int) -> None:
+@pytest.mark.parametrize("kind", [EXPLORED, PROVED])
+def test_killed_again_and_again(tmp_path: Path, kind: str) -> None:
     problem = write_problem(tmp_path, kind)
-    more = ("--workers", str(workers))
     begun = time.monotonic()
-    code, text = outcome(start("search", str(problem), "--out", "straight", *more, cwd=tmp_path))
+    code, text = outcome(start("search", str(problem), "--out", "straight", "--workers", "2", cwd=tmp_path))
     straight_s = time.monotonic() - begun
     assert code == 0, text
     expected = (tmp_path / "straight" / "front.csv").read_bytes()
 
-    dice = random.Random(f"{kind} {workers}")
+    dice = random.Random(kind)
     kills = runs = 0
     while kills < KILLS:
         runs += 1
         folder = tmp_path / f"killed-{runs}"
         reader = Reader(folder / "front.csv")
         reader.start()
-        kills += kill_until_done(problem, folder, more, dice, straight_s)
+        kills += kill_until_done(problem, folder, dice, straight_s)
         reader.done.set()
         reader.join()
         assert (folder / "front.csv").read_bytes() == expected
@@ -149,7 +153,7 @@ def test_killed_again_and_again(tmp_path: Path, kind: str, workers: int) -> None
         check_feasible(problem, reader.stacks)
 
 
-def kill_until_done(problem: Path, folder: Path, more: tuple[str, ...], dice: random.Random, straight_s: float) -> int:
+def kill_until_done(problem: Path, folder: Path, dice: random.Random, straight_s: float) -> int:
     """Start a run, stop it at random moments, and resume it until it ends; return how often it was stopped."""
     kills = 0
     while True:
@@ -157,7 +161,7 @@ def kill_until_done(problem: Path, folder: Path, more: tuple[str, ...], dice: ra
         if not begun:  # killed before there was anything to resume
             shutil.rmtree(folder, ignore_errors=True)
         arguments = ("--resume", str(folder)) if begun else (str(problem), "--out", str(folder))
-        process = start("search", *arguments, *more, cwd=problem.parent)
+        process = start("search", *arguments, "--workers", dice.choice("123"), cwd=problem.parent)
         number = dice.choice([signal.SIGKILL, signal.SIGKILL, signal.SIGINT, signal.SIGTERM])
         try:
             process.wait(dice.uniform(0.2, 1.0) * straight_s)

@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from stackopt.problem import Problem, Stack
     from stackopt.run import RunResult
 
+MOST_PER_CORE = 8
 LARGEST_SEED = 2**32 - 1
 PLOT_SUFFIXES = (".png", ".svg", ".pdf")
 
@@ -337,9 +338,10 @@ def _wrong_hours(hours: float | None) -> Finding | None:
 def _wrong_workers(workers: int | None, cluster: str | None) -> Finding | None:
     if workers is not None and cluster is not None:
         return Finding("", "--workers", "cannot be given with --cluster, which has workers of its own; leave one out")
-    if workers is None or workers >= 1:
+    most = MOST_PER_CORE * (os.cpu_count() or 1)
+    if workers is None or 1 <= workers <= most:
         return None
-    return Finding("", "--workers", f"found {workers}; write 1 or more")
+    return Finding("", "--workers", f"found {workers}; write a number from 1 to {most}, {MOST_PER_CORE} for each core")
 
 
 def _wrong_seed(seed: int | None) -> Finding | None:

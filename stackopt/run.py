@@ -152,12 +152,12 @@ def search_run(problem_path: Path | None, options: RunOptions, watcher: Watcher)
         return _resume(options.resume, options, watcher, deadline, proof_only=False)
     assert problem_path is not None
     problem = read_problem(problem_path, allow_outside=options.allow_outside)
-    folder = make_folder(problem, options.out)
-    with _at_work(folder):
-        refuse_used(folder)
-        problem = _read_copies(problem, folder)
-        watcher(Status("compiling"))
-        with _open_workers(_workers(options), options.cluster) as crew:
+    with _open_workers(_workers(options), options.cluster) as crew:  # first: without them no folder is made
+        folder = make_folder(problem, options.out)
+        with _at_work(folder):
+            refuse_used(folder)
+            problem = _read_copies(problem, folder)
+            watcher(Status("compiling"))
             task = Search(problem, options.seed, crew)
             return _Run(folder, problem, task, watcher).go(options, deadline)
 

@@ -224,7 +224,8 @@ def test_materials_lists_a_set(problem: Path, tmp_path: Path) -> None:
     [
         (["search", "PROBLEM", "--hours", "-1"], "--hours: found -1; write a time above 0 hours"),
         (["search", "PROBLEM", "--hours", "nan"], "--hours: found nan"),
-        (["search", "PROBLEM", "--workers", "0"], "--workers: found 0; write 1 or more"),
+        (["search", "PROBLEM", "--workers", "0"], "--workers: found 0; write a number from 1 to"),
+        (["search", "PROBLEM", "--workers", "1000000"], "--workers: found 1000000; write a number from 1 to"),
         (["search", "PROBLEM", "--workers", "2", "--cluster", "a"], "--workers: cannot be given with --cluster"),
         (["prove", "FOLDER", "--workers", "2", "--cluster", "a"], "--workers: cannot be given with --cluster"),
         (["search", "PROBLEM", "--seed", "-3"], "--seed: found -3; write a whole number from 0"),

@@ -3,8 +3,8 @@
 The search of every island is pymoo's NSGA-II inside ask and tell, on integer genes (`stackopt.stock`). After each epoch
 the archives of the islands are merged, the new members are polished by all their local moves until nothing improves,
 and the islands start again from their populations and some members of the archive. An epoch depends on nothing but the
-seed, its number, the populations and the archive, so that the state between epochs is a few plain arrays, and that it
-does not matter how many workers share the islands and the moves.
+seed, its number, the populations and the archive, so that the state is a few plain arrays, and that it does not matter
+how many workers share the islands and the moves.
 """
 
 from __future__ import annotations
@@ -38,6 +38,8 @@ QUIET_EPOCHS = 2
 """Exploring ends after so many epochs without a new member."""
 _TOGETHER = 2
 """Stacks whose moves are one call."""
+_AT_A_TIME = 64
+"""Stacks polished before what is found is merged, and may be saved."""
 
 
 class StackProblem(PymooProblem):  # type: ignore[misc]
@@ -165,7 +167,7 @@ def try_moves(stock: Stock, stacks: Integers, known: Archive, seed: int | None) 
 
 
 class Explorer:
-    """The exploring phase, one epoch at a time.
+    """The exploring phase, one epoch at a time, each in parts.
 
     Parameters
     ----------
@@ -190,6 +192,9 @@ class Explorer:
         self.computed = 0
         self.epoch = 0
         self.quiet = 0
+        self.polishing = False
+        """Whether an epoch has begun and its polish is not done."""
+        self._gained = False  # whether the epoch has brought anything new
         self._polished: set[bytes] = set()
         self._polished_pairs: set[bytes] = set()
         random = np.random.default_rng((seed, 0))
@@ -203,37 +208,66 @@ class Explorer:
         return self.quiet >= QUIET_EPOCHS
 
     def step(self, watch: Callable[[], None] = lambda: None) -> None:
-        """Run one epoch of every island, merge and polish.
+        """Go on to the end of the epoch; see `advance`."""
+        self.advance(watch)
+        while self.polishing:
+            self.advance(watch)
 
-        ``watch`` is called now and then; if it raises, the state is that before the epoch.
+    def advance(self, watch: Callable[[], None] = lambda: None) -> None:
+        """Run the islands of an epoch, or else a part of its polish; the epoch ends when nothing is left to polish.
+
+        ``watch`` is called now and then; if it raises, the state is that before.
         """
         before = self.state()
         try:
-            self._run_epoch(watch)
+            if self.polishing:
+                self._polish_some(watch)
+            else:
+                self._run_islands(watch)
+                self.polishing = True
+            if self._next_to_polish() is None:
+                self._end_epoch()
         except BaseException:
             self.restore(before)
             raise
 
-    def _run_epoch(self, watch: Callable[[], None]) -> None:
-        before = self.archive.values
+    def _run_islands(self, watch: Callable[[], None]) -> None:
         islands = [
             (self._migrated(island), self.archive, (self.seed, self.epoch + 1, island))
             for island in range(len(self.populations))
         ]
         found = self._gather(run_island, islands, watch)
         self.populations = [result.population for result in found]
-        self.polish(watch)
+
+    def _end_epoch(self) -> None:
         self.epoch += 1
-        self.quiet = self.quiet + 1 if np.array_equal(before, self.archive.values) else 0
+        self.quiet = 0 if self._gained else self.quiet + 1
+        self.polishing = self._gained = False
 
     def polish(self, watch: Callable[[], None] = lambda: None) -> None:
         """Try every local move of every archive member, then moves of two positions at once, until nothing improves."""
-        kinds = ((None, self._polished), (self.seed, self._polished_pairs))
-        while work := next(((seed, tried, fresh) for seed, tried in kinds if len(fresh := self._untried(tried))), None):
-            seed, tried, fresh = work
-            parts = [fresh[start : start + _TOGETHER] for start in range(0, len(fresh), _TOGETHER)]
-            self._gather(try_moves, [(part, self.archive, seed) for part in parts], watch)
-            tried.update(genes.tobytes() for genes in fresh)
+        while self._next_to_polish() is not None:
+            self._polish_some(watch)
+
+    def _polish_some(self, watch: Callable[[], None]) -> None:
+        work = self._next_to_polish()
+        if work is None:
+            return
+        seed, tried, fresh = work
+        parts = [fresh[start : start + _TOGETHER] for start in range(0, len(fresh), _TOGETHER)]
+        self._gather(try_moves, [(part, self.archive, seed) for part in parts], watch)
+        tried.update(genes.tobytes() for genes in fresh)
+
+    def _next_to_polish(self) -> tuple[int | None, set[bytes], Integers] | None:
+        """Return some members whose moves have not been tried, which moves, and where to note that they have been."""
+        for seed, tried in ((None, self._polished), (self.seed, self._polished_pairs)):
+            fresh = self.archive.codes[~self._are_in(tried)]
+            if len(fresh):
+                return seed, tried, fresh[:_AT_A_TIME]
+        return None
+
+    def _are_in(self, tried: set[bytes]) -> NDArray[np.bool_]:
+        return np.array([genes.tobytes() in tried for genes in self.archive.codes], dtype=bool)
 
     def _gather(
         self, function: Callable[..., Found], arguments: list[tuple[Any, ...]], watch: Callable[[], None]
@@ -244,13 +278,9 @@ class Explorer:
         # All first: none may see what another brings to the archive.
         found = gather(self._workers, function, self._published, arguments, watch)
         for result in found:
-            self.archive.add(result.archive.values, result.archive.codes)
+            self._gained |= self.archive.add(result.archive.values, result.archive.codes) > 0
             self.computed += result.computed
         return found
-
-    def _untried(self, tried: set[bytes]) -> Integers:
-        fresh = [genes.tobytes() not in tried for genes in self.archive.codes]
-        return np.asarray(self.archive.codes[np.array(fresh, dtype=bool)])
 
     def take(self, genes: Integers, watch: Callable[[], None] = lambda: None) -> None:
         """Judge stacks known from elsewhere, keep the feasible ones, and polish them."""
@@ -258,22 +288,28 @@ class Explorer:
         self.polish(watch)
 
     def state(self) -> dict[str, NDArray[np.int64]]:
-        """Return the state between epochs as plain arrays."""
+        """Return the state as plain arrays."""
+        counters = [self.seed, self.epoch, self.quiet, self.computed, self.polishing, self._gained]
+        polished = [self._are_in(self._polished), self._are_in(self._polished_pairs)]
         return {
             "values": self.archive.values,
             "codes": self.archive.codes,
+            "polished": np.stack(polished, axis=1).astype(np.int64),
             "populations": np.stack(self.populations),
-            "counters": np.array([self.seed, self.epoch, self.quiet, self.computed], dtype=np.int64),
+            "counters": np.array(counters, dtype=np.int64),
         }
 
     def restore(self, state: Mapping[str, NDArray[np.int64]]) -> None:
         """Go on from a state of the same problem."""
         self.archive.values, self.archive.codes = state["values"], state["codes"]
         self.populations = list(state["populations"])
-        self.seed, self.epoch, self.quiet, self.computed = (int(value) for value in state["counters"])
-        # The members of the first look are not polished before the first epoch.
-        self._polished = {genes.tobytes() for genes in self.archive.codes} if self.epoch else set()
-        self._polished_pairs = set(self._polished)
+        *counters, polishing, gained = (int(value) for value in state["counters"])
+        self.seed, self.epoch, self.quiet, self.computed = counters
+        self.polishing, self._gained = bool(polishing), bool(gained)
+        # A stack that left the archive never comes back, so that the members' flags tell all.
+        self._polished, self._polished_pairs = (
+            {genes.tobytes() for genes in self.archive.codes[flags > 0]} for flags in state["polished"].T
+        )
 
     def _migrated(self, island: int) -> Integers:
         """Population of an island, a tenth of it replaced by members of the archive."""

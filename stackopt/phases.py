@@ -205,7 +205,7 @@ class Search:
 
         while self.exploring and time.monotonic() < deadline:
             begun = time.monotonic()
-            self.explorer.step(watch)
+            self.explorer.advance(watch)
             self.seconds["exploring"] += time.monotonic() - begun
             self.exploring = not self.explorer.finished
             save()

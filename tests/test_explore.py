@@ -227,7 +227,7 @@ class TestState:
     @STOCKS
     @pytest.mark.parametrize(("epochs", "calls"), [(1, 1), (1, ISLANDS), (0, ISLANDS + 1), (0, ISLANDS + 3)])
     def test_stopped_within_an_epoch(self, stock: Stock, epochs: int, calls: int) -> None:
-        """The state is that before the epoch, and the epoch can be run again; the last ones stop within the polish."""
+        """The state is a good one, from which the epoch goes on; the last ones stop within the polish."""
         explorer = explored(stock, epochs)
         left = [calls]
 
@@ -238,9 +238,30 @@ class TestState:
 
         with pytest.raises(Stopped):
             explorer.step(watch)
-        assert listed(explorer.state()) == listed(way(stock)[epochs])
-        explorer.step()
-        assert listed(explorer.state()) == listed(way(stock)[epochs + 1])
+        assert explorer.polishing == (calls > ISLANDS)
+        if not explorer.polishing:
+            assert listed(explorer.state()) == listed(way(stock)[epochs])
+        resumed = Explorer(stock, 999, 16, look=False)
+        resumed.restore(copied(explorer.state()))
+        for one in (explorer, resumed):
+            one.step()
+            assert listed(one.state()) == listed(way(stock)[epochs + 1])
+
+    @STOCKS
+    def test_goes_on_from_every_part_of_an_epoch(self, stock: Stock, monkeypatch: pytest.MonkeyPatch) -> None:
+        """As a run that is killed does it, whose checkpoints may come between any two parts."""
+        monkeypatch.setattr("stackopt.explore._AT_A_TIME", 3)
+        explorer, states = Explorer(stock, 3, 16), []
+        while explorer.epoch == 0:
+            explorer.advance()
+            states.append(copied(explorer.state()))
+        assert len(states) > 2
+        for state in states:
+            resumed = Explorer(stock, 999, 16, look=False)
+            resumed.restore(state)
+            while resumed.epoch == 0:
+                resumed.advance()
+            assert listed(resumed.state()) == listed(explorer.state())
 
     @STOCKS
     @pytest.mark.parametrize("epochs", [0, 1, 2])

@@ -94,6 +94,7 @@ def search(
     workers: int = 1,
     hours: float | None = None,
     watcher: Watcher = lambda _: None,
+    cluster: str | None = None,
 ) -> Front:
     """Search a problem without a run folder.
 
@@ -109,6 +110,8 @@ def search(
         Longest time.
     watcher : callable
         Receives a `stackopt.status.Status` now and then.
+    cluster : str, optional
+        Address of a Dask scheduler whose workers explore and prove, instead of processes here.
 
     Returns
     -------
@@ -116,7 +119,7 @@ def search(
         Complete where the problem's gauges are discrete and time allowed.
     """
     deadline = _deadline(hours)
-    with _open_workers(workers) as crew:
+    with _open_workers(workers, cluster) as crew:
         return Search(problem, seed, crew).run(watcher, deadline)
 
 

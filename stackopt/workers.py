@@ -32,6 +32,8 @@ EVERY_S = 0.2
 """How often those who wait for results look at something else."""
 ATTEMPTS = 5
 """How often a call is tried whose worker is killed."""
+ATTEMPTS_TO_START = 2
+"""The same where no worker has lived long enough to be asked."""
 _KEPT = 4  # published tables that a worker keeps: those of two rounds
 
 
@@ -248,8 +250,8 @@ class Processes(Workers):
         self._executor = ProcessPoolExecutor(
             self._count, context, initializer=_begin, initargs=(self._held, str(self._folder), self._modules)
         )
-        for _ in range(self._count):  # a process is started for each call that finds none free
-            self._executor.submit(_awake)
+        # A process is started for each call that finds none free.
+        self._first = [self._executor.submit(_awake) for _ in range(self._count)]
 
     def _end(self) -> None:
         self._executor.shutdown(wait=False, cancel_futures=True)
@@ -259,10 +261,15 @@ class Processes(Workers):
     def _restart(self) -> None:
         lost = list(self._running.values())
         self._running.clear()
+        most = (
+            ATTEMPTS
+            if any(future.done() and future.exception() is None for future in self._first)
+            else ATTEMPTS_TO_START
+        )
         self._end()
-        if any(call.attempts + 1 >= ATTEMPTS for call in lost):
+        if any(call.attempts + 1 >= most for call in lost):
             raise WorkersLostError(
-                f"worker processes were killed {ATTEMPTS} times in a row; if memory is short, use fewer --workers (a "
+                f"worker processes were killed {most} times in a row; if memory is short, use fewer --workers (a "
                 'script that asks for several workers must do so under `if __name__ == "__main__":`)'
             )
         self._start()

@@ -132,6 +132,25 @@ class TestProcesses:
                 gather(workers, die_always, workers.publish(None), [()])
             assert workers.running == 0
 
+    def test_a_script_that_is_not_guarded(self, tmp_path: Path) -> None:
+        """Its processes import it and would start processes of their own; they end at once, and that is said."""
+        script = tmp_path / "script.py"
+        script.write_text(
+            textwrap.dedent("""
+                from operator import add
+                from stackopt.errors import WorkersLostError
+                from stackopt.workers import Processes, gather
+                with Processes(1) as workers:
+                    try:
+                        gather(workers, add, workers.publish(1), [(2,)])
+                    except WorkersLostError as error:
+                        print(error)
+            """)
+        )
+        done = subprocess.run([sys.executable, str(script)], capture_output=True, text=True, timeout=120, check=True)
+        assert "killed 2 times in a row" in done.stdout
+        assert 'must do so under `if __name__ == "__main__":`' in done.stdout
+
     def test_closing_does_not_wait(self) -> None:
         workers = Processes(1)
         tables = workers.publish(None)

@@ -123,7 +123,7 @@ def _read_rows(path: Path, problem: Problem, most_rank: int | None = None) -> li
     except ValueError as error:
         raise RunError(Finding(str(path), "", f"{error}; {START_ANEW}")) from None
     rows: list[tuple[int, FrontRow]] = []
-    for line, record in _records(path, text):
+    for line, record in list(_records(path, text)):  # all first: too many rows are refused before any is looked at
         try:
             rank, row = _row(record, problem)
             if rank != len(rows) + 1 if most_rank is None else rank > most_rank:

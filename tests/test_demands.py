@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import replace
 from itertools import product
 
 import numpy as np
 import pytest
 
-from stackopt import demands, evaluate, proof
+from stackopt import demands, evaluate, shares
 from stackopt.archive import Archive, non_dominated
 from stackopt.compiled import MARGIN_SLACK_DB, CompiledProblem, compile_problem
 from stackopt.explore import Explorer
@@ -30,6 +31,7 @@ from stackopt.proof import Prover
 from stackopt.shares import mirror_holds
 from stackopt.stock import Stock
 from stackopt.tolerance import tolerances_of
+from stackopt.workers import Processes
 
 LOOPS = CoaxialLoops(10e-3, 5e-3, 12e-3, 15e-3)
 MASK = Mask((1e3, 20e3, 200e3), (2.0, 20.0, 45.0), points_per_decade=4)
@@ -81,16 +83,26 @@ def brute_force(compiled: CompiledProblem) -> np.ndarray:
     return np.unique(values[non_dominated(values)], axis=0)
 
 
+@pytest.fixture(scope="module")
+def processes() -> Iterator[Processes]:
+    with Processes(2) as workers:
+        yield workers
+
+
 @pytest.mark.parametrize("problem", CASES.values(), ids=CASES)
 @pytest.mark.parametrize("room", [3, 20_000])
-def test_proof_equals_brute_force(problem: Problem, room: int, monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr(proof, "CANDIDATES", room)  # a small room makes shares start again
+def test_proof_equals_brute_force(
+    problem: Problem, room: int, processes: Processes, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr(shares, "CANDIDATES", room)  # with a small room shares end early
     compiled = compile_problem(problem)
-    archive = Archive(3, 3)
-    assert Prover(compiled, archive).run(workers=2)
+    here, there = Archive(3, 3), Archive(3, 3)
+    assert Prover(compiled, here).run()
+    assert Prover(compiled, there).run(processes)
     expected = brute_force(compiled)
     assert len(expected)
-    assert np.array_equal(archive.values, expected)
+    assert np.array_equal(here.values, expected)
+    assert np.array_equal(there.values, expected)
 
 
 @pytest.mark.parametrize("problem", CASES.values(), ids=CASES)

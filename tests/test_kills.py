@@ -28,7 +28,11 @@ EXPLORED, PROVED = "explored", "proved"
 COMMAND = """
 import sys
 import types
-import stackopt.run
+try:
+    import stackopt.run
+except KeyboardInterrupt:  # the command itself imports it where this is caught
+    print("Interrupted.")
+    sys.exit(130)
 stackopt.run.CHECKPOINT_EVERY_S = 0.5
 # What is drawn takes most of the time of so short a run; the tables and the record stay.
 stackopt.run.write_trade_off = stackopt.run.write_curves = lambda *_: None
@@ -144,7 +148,7 @@ def test_killed_again_and_again(tmp_path: Path, kind: str) -> None:
         folder = tmp_path / f"killed-{runs}"
         reader = Reader(folder / "front.csv")
         reader.start()
-        kills += kill_until_done(problem, folder, dice, straight_s)
+        kills += kill_until_done(problem, folder, dice, straight_s, KILLS - kills)
         reader.done.set()
         reader.join()
         assert (folder / "front.csv").read_bytes() == expected
@@ -153,8 +157,11 @@ def test_killed_again_and_again(tmp_path: Path, kind: str) -> None:
         check_feasible(problem, reader.stacks)
 
 
-def kill_until_done(problem: Path, folder: Path, dice: random.Random, straight_s: float) -> int:
-    """Start a run, stop it at random moments, and resume it until it ends; return how often it was stopped."""
+def kill_until_done(problem: Path, folder: Path, dice: random.Random, straight_s: float, most: int) -> int:
+    """Start a run, stop it at random moments, and resume it until it ends; return how often it was stopped.
+
+    After the most stops it is left alone.
+    """
     kills = 0
     while True:
         begun = (folder / "run.json").exists()
@@ -164,7 +171,7 @@ def kill_until_done(problem: Path, folder: Path, dice: random.Random, straight_s
         process = start("search", *arguments, "--workers", dice.choice("123"), cwd=problem.parent)
         number = dice.choice([signal.SIGKILL, signal.SIGKILL, signal.SIGINT, signal.SIGTERM])
         try:
-            process.wait(dice.uniform(0.2, 1.0) * straight_s)
+            process.wait(dice.uniform(0.15, 0.7) * straight_s if kills < most else None)
         except subprocess.TimeoutExpired:
             process.send_signal(number)
         code, text = outcome(process)

@@ -30,14 +30,14 @@ import sys
 import types
 try:
     import stackopt.run
-except KeyboardInterrupt:  # the command itself imports it where this is caught
+    from stackopt.cli import main
+except KeyboardInterrupt:  # the command itself imports most of that where an interrupt is caught
     print("Interrupted.")
     sys.exit(130)
 stackopt.run.CHECKPOINT_EVERY_S = 0.5
 # What is drawn takes most of the time of so short a run; the tables and the record stay.
 stackopt.run.write_trade_off = stackopt.run.write_curves = lambda *_: None
 sys.modules["stackopt.outputs.page"] = types.SimpleNamespace(write_page=lambda *_: None)
-from stackopt.cli import main
 sys.argv[0] = "stackopt"
 main()
 """

@@ -30,6 +30,8 @@ class Judged:
     stacks: list[Stack]
     totals: Integers
     margin_db: Real
+    each_db: Real
+    """Margin for each requirement, shape (stack, requirement)."""
     decisive_db: Real
     """The margin that decides, where tolerances are assumed; else the same."""
     extra: list[dict[str, float | str]]
@@ -76,17 +78,22 @@ def judge(compiled: CompiledProblem, stacks: list[Stack], error_db: float, extra
     """
     problem = compiled.problem
     if not stacks:
-        none = np.empty(0, dtype=np.int64)
-        return Judged(problem, [], np.empty((0, 3), dtype=np.int64), np.empty(0), np.empty(0), [], np.empty(0), none)
+        none, each = np.empty(0), np.empty((0, len(problem.requirements)))
+        return Judged(
+            problem, [], np.empty((0, 3), dtype=np.int64), none, each, none, [], none, np.empty(0, dtype=np.int64)
+        )
     sheets = tuple(dict.fromkeys(sheet for stack in stacks for sheet in stack))
     dense = compile_problem(problem, sheets, DENSITY, error_db / FINER, extra_hz)
     codes = evaluate.encode(dense, stacks)
     totals = evaluate.sums(dense, codes)
-    margin, row = evaluate.margins(dense, codes, totals)
+    over = evaluate.attenuation_rows(dense, codes, totals) - dense.rows.required_db
+    parts = [over[:, dense.rows.requirement == n].min(axis=1) for n in range(len(problem.requirements))]
+    row = np.argmin(over, axis=1)
+    margin = over[np.arange(len(over)), row]
     decisive, row = demands.decisive_margins(dense, codes, margin, row, _on_search_grid(compiled, dense))
     extra = demands.extra_columns(dense, codes)
     where, which = dense.rows.frequency_hz[row], dense.rows.requirement[row]
-    return Judged(problem, stacks, totals, margin, decisive, extra, where, which)
+    return Judged(problem, stacks, totals, margin, np.stack(parts, axis=1), decisive, extra, where, which)
 
 
 def _on_search_grid(compiled: CompiledProblem, dense: CompiledProblem) -> NDArray[np.bool_]:

@@ -60,6 +60,8 @@ class Search:
         self.seconds = {"exploring": 0.0, "proving": 0.0, "confirming": 0.0}
         self.tally = Tally()
         self.prover: Prover | None = None
+        self.margins_db: dict[str, float] = {}
+        """Largest margin for each requirement on the front that `run` returned, on the dense grid, dB."""
         self._margins: tuple[Integers | None, dict[str, float]] = (None, {})
         self._begin_round()
 
@@ -262,14 +264,16 @@ class Search:
         if values is not self.archive.values:
             compiled, codes = self._tabulated_so_far()
             over = evaluate.attenuation_rows(compiled, codes) - compiled.rows.required_db
-            names = [requirement.name for requirement in self.problem.requirements]
-            margins = {
-                name: float(np.max(np.min(over[:, compiled.rows.requirement == n], axis=1)))
-                for n, name in enumerate(names)
-                if len(over)
-            }
+            count = len(self.problem.requirements)
+            each = [np.min(over[:, compiled.rows.requirement == n], axis=1) for n in range(count)]
+            margins = self._by_requirement(np.stack(each, axis=1))
             self._margins = self.archive.values, margins
         return margins
+
+    def _by_requirement(self, each_db: NDArray[np.float64]) -> dict[str, float]:
+        """Largest margin for each requirement, of margins of shape (stack, requirement)."""
+        names = [requirement.name for requirement in self.problem.requirements]
+        return dict(zip(names, each_db.max(axis=0).tolist(), strict=True)) if len(each_db) else {}
 
     def _tabulated_so_far(self) -> tuple[CompiledProblem, Integers]:
         """Return the best stacks as codes of a compiled problem; while there are none, the one nearest to the mask."""
@@ -339,7 +343,7 @@ class Search:
 
     def _front(self, numbers: Integers, judged: confirm.Judged, some_failed: bool) -> Front:
         """Front of the confirmed stacks; of equal ones a row shows that of largest margin, then fewest sheets."""
-        ranked, equals = [], []
+        ranked, equals, shown = [], [], []
         lost_at_level = 0
         for number in range(len(self.archive)):
             here = np.flatnonzero((numbers == number) & judged.holds)
@@ -351,7 +355,9 @@ class Search:
                 holding, key=lambda n: (-round(float(judged.decisive_db[n]), 6), len(judged.stacks[n]))
             )
             ranked.append(judged.row(best))
+            shown.append(best)
             equals += [(len(ranked), judged.row(n)) for n in others]
+        self.margins_db = self._by_requirement(judged.each_db[shown])
         complete = self.prover is not None and self.prover.complete and not some_failed and not lost_at_level
         statement = self._statement(len(ranked), complete, some_failed)
         if lost_at_level:

@@ -394,7 +394,7 @@ class _Run:
     def _write_record(self, front: Front | None) -> None:
         record = make_record(self.problem, self.task, self.inputs_sha256)
         if front is not None:
-            record |= result_record(self.problem, self.task, front, self.status_file.last.margins)
+            record |= result_record(self.problem, self.task, front, self.task.margins_db)
         text = json.dumps(record, indent=2, ensure_ascii=False) + "\n"
         write_whole(self.folder / RECORD, lambda part: _write_text(part, text))
 

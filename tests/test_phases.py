@@ -26,6 +26,7 @@ from stackopt.problem import (
     CoaxialLoops,
     MagneticNearField,
     Mask,
+    PlaneWave,
     Problem,
     SearchSettings,
     Stack,
@@ -389,6 +390,34 @@ class TestWatcher:
         assert task.explorer.epoch == 0
         assert not front.complete
         assert task.proof_record()["share_settled"] == 0.0
+
+
+class TestMargins:
+    def test_of_the_front_on_the_dense_grid(self) -> None:
+        task = Search(make())
+        front = task.run()
+        assert task.margins_db == {front.rows[0].requirement: max(row.margin_db for row in front.rows)}
+
+    def test_of_several_requirements(self) -> None:
+        """Each has the margin of the stack that suits it best; none is below the one that decides for that stack."""
+        task = Search(make(NEAR, PlaneWave(), masks=[MASK, Mask((1e3, 1e5), (10.0, 60.0), points_per_decade=2)]))
+        seen: list[Status] = []
+        front = task.run(seen.append)
+        names = {requirement.name for requirement in task.problem.requirements}
+        assert set(task.margins_db) == names
+        assert len(names) == 2
+        assert min(task.margins_db.values()) >= max(row.margin_db for row in front.rows) - 1e-9
+        assert {frozenset(status.margins) for status in seen if status.phase == "exploring"} == {frozenset(names)}
+
+    def test_while_nothing_is_feasible(self) -> None:
+        """The margins are those of the stack that comes nearest."""
+        task = Search(make(masks=[Mask((1e3, 1e5), (300.0, 300.0))]))
+        seen: list[Status] = []
+        front = task.run(seen.append)
+        assert len(front) == 0
+        assert task.margins_db == {}
+        assert all(margin < 0.0 for status in seen for margin in status.margins.values())
+        assert any(status.margins for status in seen)
 
 
 class TestProofRecord:

@@ -110,7 +110,7 @@ class Cluster(Workers):
         key = f"stackopt-{function.__name__}-{uuid.uuid4().hex}"
         future: Any = self._client.submit(_call, self._versions, function, tables, arguments, key=key)
         self._running[key] = ticket, future
-        future.add_done_callback(lambda done: self._done.put(done.key))
+        self._tell_when_done(future)
 
     def finished(self, timeout_s: float = EVERY_S) -> list[tuple[Any, Any]]:
         """Take the results that are there."""
@@ -122,10 +122,18 @@ class Cluster(Workers):
         except Empty:
             return []
         for key in keys:
-            if key in self._running:  # not abandoned
-                ticket, future = self._running.pop(key)
-                results.append((ticket, self._result(future)))
+            ticket, future = self._running.get(key, (None, None))
+            if future is None:
+                continue  # abandoned
+            if future.status in ("lost", "pending"):  # its worker died with the result, so that it is run again
+                self._tell_when_done(future)
+                continue
+            del self._running[key]
+            results.append((ticket, self._result(future)))
         return results
+
+    def _tell_when_done(self, future: Any) -> None:
+        future.add_done_callback(lambda done: self._done.put(done.key))
 
     def abandon(self) -> None:
         """Cancel all calls."""
@@ -148,7 +156,7 @@ class Cluster(Workers):
     def _result(self, future: Any) -> Any:
         from distributed import KilledWorker
 
-        if future.status in ("cancelled", "lost"):
+        if future.status == "cancelled":
             raise WorkersLostError(f"the scheduler at {self._address} was lost; start it again, and go on with the run")
         try:
             result = future.result()

@@ -83,6 +83,18 @@ class TestCalls:
         assert workers.finished(0.05) == []
 
 
+class Lost:
+    """A future whose result went away."""
+
+    key, status = "key", "lost"
+
+    def add_done_callback(self, function: Any) -> None:
+        self.tell = lambda: function(self)
+
+    def result(self) -> int:
+        return 42
+
+
 def sleep_and_tell(tables: object, seconds: float, _: int) -> int:
     sleep(tables, seconds)
     return process_id(tables)
@@ -92,6 +104,18 @@ class TestLoss:
     def test_a_killed_worker_loses_only_time(self, workers: Cluster, tmp_path: Path) -> None:
         tables = workers.publish(str(tmp_path / "flag"))
         assert gather(workers, die, tables, [(f"{n}",) for n in range(6)]) == [f"{n}" for n in range(6)]
+
+    def test_a_worker_that_dies_with_a_result(self, workers: Cluster) -> None:
+        """The result counts as lost until somebody else has it: that is waited for."""
+        future = Lost()
+        workers._running["key"] = ("ticket", future)
+        workers._done.put("key")
+        assert workers.finished(0.1) == []
+        assert workers.running == 1
+        future.status = "finished"
+        future.tell()
+        assert workers.finished(0.1) == [("ticket", 42)]
+        assert workers.running == 0
 
     def test_work_that_always_kills(self, workers: Cluster) -> None:
         with pytest.raises(WorkersLostError, match="were killed again and again at the same piece of work"):
